@@ -22,7 +22,8 @@ _SLACK: Final = 1e-6
 class Design(Protocol):
     """What the kernel needs to know of a sampling design.
 
-    Every method is elementwise: the numbers for one row must not depend on the rows beside it.
+    Every method is elementwise: the numbers for one row must not depend on the rows beside it. Arrays whose memory
+    runs over the rows innermost (`shaped`) are fastest; the layout changes no number.
     """
 
     @property
@@ -61,6 +62,29 @@ def jump(side: Side, shifts: Floats) -> Floats:
     return np.expm1(shifts if side == "above" else -shifts)
 
 
+def shaped(rates: tuple[int, ...], dimension: int, shifts: Floats) -> Floats:
+    """An empty array of shape (*rates, D, G) whose memory runs over the rates innermost."""
+    inner = np.empty((dimension, shifts.size, *rates))
+    return inner.transpose(*range(2, inner.ndim), 0, 1)
+
+
+def per_label(rate: ArrayLike, side: Side, shifts: Floats) -> Floats:
+    """-log(1 - m + m e^lambda), shape (..., G): what every label costs a bet on shift lambda against rate m."""
+    product = np.multiply.outer(jump(side, shifts), np.asarray(rate, dtype=np.float64))
+    np.negative(np.log1p(product, out=product), out=product)
+    return product.transpose(*range(1, product.ndim), 0)
+
+
+def per_label_slope(labels: Rows, rate: Floats, side: Side, shifts: Floats) -> Floats:
+    """The derivative -n c / (1 + m c) of n labels' cost by the rate, shape (..., G), with c = e^lambda - 1."""
+    c = jump(side, shifts).reshape(-1, *(1,) * rate.ndim)
+    below = rate * c
+    below += 1.0
+    np.divide(c, below, out=below)
+    below *= -labels
+    return np.asarray(below.transpose(*range(1, below.ndim), 0))
+
+
 def entropy_ceiling(labels: Floats, errors: Floats, rate: float, side: Side) -> Floats:
     """n*KL(k/n, rate) on the right side of the rate, else 0, plus slack: no shift can give more evidence."""
     with np.errstate(divide="ignore", invalid="ignore"):
@@ -83,15 +107,14 @@ class Uniform:
 
     def coefficients(self, rate: ArrayLike, side: Side, shifts: Floats) -> Floats:
         """-log(1 - m + m e^lambda) for each label and lambda for each error."""
-        rate = np.asarray(rate, dtype=np.float64)
-        result = np.empty((*rate.shape, 2, shifts.size))
-        result[..., 0, :] = -np.log1p(rate[..., None] * jump(side, shifts))
+        result = shaped(np.shape(rate), 2, shifts)
+        result[..., 0, :] = per_label(rate, side, shifts)
         result[..., 1, :] = shifts if side == "above" else -shifts
         return result
 
     def slope(self, statistics: Rows, rate: Floats, side: Side, shifts: Floats) -> Floats:
         """-n c / (1 + m c) with c = e^lambda - 1."""
-        return _uniform_slope(statistics[..., 0], rate, side, shifts)
+        return per_label_slope(statistics[..., 0], rate, side, shifts)
 
     def equivalent(self, statistics: Rows, side: Side) -> tuple[Floats, Floats]:  # noqa: ARG002  one side's protocol
         """The counts themselves."""
@@ -116,16 +139,15 @@ class Loss:
 
     def coefficients(self, rate: ArrayLike, side: Side, shifts: Floats) -> Floats:
         """As `Uniform`, lambda/1e6 for each part per million."""
-        rate = np.asarray(rate, dtype=np.float64)
-        result = np.zeros((*rate.shape, 3, shifts.size))
-        result[..., 0, :] = -np.log1p(rate[..., None] * jump(side, shifts))
-        used = 1 if side == "above" else 2
-        result[..., used, :] = (shifts if side == "above" else -shifts) / PPM
+        result = shaped(np.shape(rate), 3, shifts)
+        result[..., 0, :] = per_label(rate, side, shifts)
+        result[..., 1, :] = shifts / PPM if side == "above" else 0.0
+        result[..., 2, :] = 0.0 if side == "above" else -shifts / PPM
         return result
 
     def slope(self, statistics: Rows, rate: Floats, side: Side, shifts: Floats) -> Floats:
         """As `Uniform`."""
-        return _uniform_slope(statistics[..., 0], rate, side, shifts)
+        return per_label_slope(statistics[..., 0], rate, side, shifts)
 
     def equivalent(self, statistics: Rows, side: Side) -> tuple[Floats, Floats]:
         """Labels and the summed loss of that side."""
@@ -136,11 +158,6 @@ class Loss:
         """n*KL(mean loss, rate)."""
         labels, errors = self.equivalent(statistics, side)
         return entropy_ceiling(labels, np.minimum(errors, labels), rate, side)
-
-
-def _uniform_slope(labels: Rows, rate: Floats, side: Side, shifts: Floats) -> Floats:
-    c = jump(side, shifts)
-    return np.asarray(-labels[..., None] * (c / (1.0 + rate[..., None] * c)), dtype=np.float64)
 
 
 UNIFORM: Final = Uniform()
