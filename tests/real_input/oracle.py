@@ -33,8 +33,6 @@ class Daily:
 
     labels: np.ndarray
     errors: np.ndarray
-    newest: np.ndarray
-    """Prediction time of the day's newest counted label; -1 without one."""
     late: int
     """Labels that came at or after the end of their day plus the lag: never counted."""
 
@@ -68,14 +66,13 @@ def daily(rows: list[Row], *, released: int, lag: int, days: int) -> Daily:
             known[row.id] = row
         if row.id not in latest or row.revision > latest[row.id].revision:
             latest[row.id] = row
-    labels, errors, newest = np.zeros(days, int), np.zeros(days, int), np.full(days, -1)
+    labels, errors = np.zeros(days, int), np.zeros(days, int)
     for row in known.values():
         day = (row.time - released) // DAY
         labels[day] += 1
         errors[day] += row.prediction != row.label
-        newest[day] = max(newest[day], row.time)
     late = sum(row.label is not None and name not in known for name, row in latest.items())
-    return Daily(labels, errors, newest, late)
+    return Daily(labels, errors, late)
 
 
 def _mixture(restart: int) -> tuple[np.ndarray, np.ndarray]:
@@ -170,19 +167,49 @@ def _root(counts: Daily, day: int, threshold: float, planned: int, tolerance: fl
     return low
 
 
-def support(
-    counts: Daily, day: int, *, tolerance: float, risk: float, planned: int, at_least: int, released: int
-) -> int | None:
-    """First day of the shortest window, ending at the newest counted label and at least so many seconds long, whose
-    upper limit is at most the tolerance; None if there is none."""
-    newest = int(counts.newest[: day + 1].max())
+def support(counts: Daily, day: int, *, tolerance: float, risk: float, planned: int, at_least: int) -> int | None:
+    """First day of the shortest window, ending with this day and at least so many days long, whose upper limit is at
+    most the tolerance; None if there is none. Whether a warning stands is another question."""
     labels, errors = _windows(counts, day)
-    for j in range(day, -1, -1):
+    for j in range(day + 1 - at_least, -1, -1):
         share = _share(j, (0.50, 0.45, 0.05), planned)
         against = float(_evidence(j, labels[j], errors[j], tolerance, -1))
-        if newest - (released + j * DAY) >= at_least and against >= math.log(1 / (risk * share)):
+        if against >= math.log(1 / (risk * share)):
             return j
     return None
+
+
+def upper_limit(counts: Daily, day: int, since: int, *, risk: float, planned: int) -> float:
+    """The upper limit of the window of days `since` to `day` at its part of the risk of support, by halving."""
+    labels, errors = counts.labels[since : day + 1].sum(), counts.errors[since : day + 1].sum()
+    threshold = math.log(1 / (risk * _share(since, (0.50, 0.45, 0.05), planned)))
+    low, high = errors / labels, 1.0 - 1e-12
+    for _ in range(60):
+        middle = (low + high) / 2
+        if float(_evidence(since, labels, errors, middle, -1)) >= threshold:
+            high = middle
+        else:
+            low = middle
+    return high
+
+
+def warnings(counts: Daily, *, tolerance: float, every: int, calm: int = 28) -> list[bool]:
+    """Whether a warning stands after each day: raised when the sum over all windows since the newest reset is at or
+    over `every`, which resets; over once the fresh sum stayed below its square root for `calm` days."""
+    standing, first, last_loud, found = False, 0, 0, []
+    for day in range(len(counts.labels)):
+        value = 0.0
+        for j in range(first, day + 1):
+            labels, errors = counts.labels[j : day + 1].sum(), counts.errors[j : day + 1].sum()
+            value += math.exp(min(700.0, float(_evidence(1, labels, errors, tolerance, 1))))
+        if value >= every:
+            standing, first, last_loud = True, day + 1, day
+        elif standing and value >= math.sqrt(every):
+            last_loud = day
+        elif standing and day - last_loud >= calm:
+            standing = False
+        found.append(standing)
+    return found
 
 
 def log_tail(errors: int, labels: int, rate: float) -> float:

@@ -12,6 +12,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 from dataclasses import dataclass, replace
 from datetime import UTC, datetime
+from functools import cache
 from random import Random
 from typing import Final
 
@@ -183,4 +184,10 @@ def _other(label: str) -> str:
 
 
 def _text(time: int) -> str:
-    return datetime.fromtimestamp(time, UTC).strftime("%Y-%m-%dT%H:%M:%SZ")
+    day, second = divmod(time, DAY)
+    return f"{_date(day)}T{second // 3600:02}:{second // 60 % 60:02}:{second % 60:02}Z"
+
+
+@cache
+def _date(day: int) -> str:
+    return datetime.fromtimestamp(day * DAY, UTC).strftime("%Y-%m-%d")

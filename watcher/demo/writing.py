@@ -6,11 +6,12 @@ import csv
 import io
 from collections.abc import Iterable
 from datetime import UTC, datetime
+from functools import cache
 from itertools import groupby
 from pathlib import Path
 from typing import Final
 
-from watcher.demo.scenario import CARRIERS, CLASSES, DEPOTS, RELEASED, TOLERANCE, Row, generate
+from watcher.demo.scenario import CARRIERS, CLASSES, DAY, DEPOTS, RELEASED, TOLERANCE, Row, generate
 from watcher.errors import UsageError
 
 CONFIGURATION: Final = "watcher.toml"
@@ -120,7 +121,12 @@ def write(folder: Path, seed: int) -> Path:
 
 
 def _week(row: Row) -> str:
-    return datetime.fromtimestamp(row.arrived, UTC).strftime("%G-W%V")
+    return _iso_week(row.arrived // DAY)
+
+
+@cache
+def _iso_week(day: int) -> str:
+    return datetime.fromtimestamp(day * DAY, UTC).strftime("%G-W%V")
 
 
 def _cells(row: Row) -> tuple[str | int, ...]:
