@@ -20,10 +20,10 @@ _BLOCK: Final = 65_536
 _ROUNDS: Final = 200
 _NEWTON_ROUNDS: Final = 60
 """After so many rounds the search halves its bracket: Newton's method may crawl where a design is not convex."""
-_TIGHT: Final = 1e-9
+_TIGHT: Final = 1e-8
 """A limit is accepted when its evidence is at most so many nats over the threshold."""
 _GAP: Final = 8.0 * np.finfo(np.float64).eps
-"""... or when the bracket is so narrow, relative to the rate: with 1e9 labels rounding alone is more than 1e-9 nats."""
+"""... or when the bracket is so narrow, relative to the rate: with 1e9 labels rounding alone is more than that."""
 
 
 def evidence(
@@ -180,12 +180,12 @@ class _Search:
     def _start(self, which: NDArray[np.intp]) -> Floats:
         """Where n*KL(k/n, m) equals the threshold plus the usual price of the mixture: close to the limit.
 
-        The price 1.2 + log(n p (1 - p))/4 is an observation on LIFE; a poor start costs rounds, nothing else.
+        The price 1.09 + log(n p (1 - p))/4 is an observation on LIFE; a poor start costs rounds, nothing else.
         """
         labels, errors = self.design.equivalent(self.rows[which], self.side)
         labels = np.maximum(labels, 1.0)
         p = np.clip(errors, 0.0, labels) / labels
-        price = 1.2 + 0.25 * np.log1p(labels * p * (1.0 - p))
+        price = 1.09 + 0.25 * np.log1p(labels * p * (1.0 - p))
         goal = (self.thresholds[which] + price) / labels
         half = np.sqrt(2.0 * goal * (p * (1.0 - p) + 0.5 * goal))
         m = _inside((p + goal + self.outward * half) / (1.0 + 2.0 * goal))
