@@ -1,0 +1,119 @@
+"""Notices into a message: sentence, numbers, advice, where to look, and for retraining the evidence itself."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+from typing import Final
+from urllib.parse import quote
+
+from watcher.answer import standing_json
+from watcher.notices import sentences
+from watcher.notices.base import PERIODIC, Archive, Attachment, Item, Message, RouteSpec
+from watcher.notices.bundle import bundle
+from watcher.notices.outside import safe
+from watcher.records import Head, Notice, Standing, Terms
+
+_GRAVEST: Final = ("breach", "breach-withdrawn", "warning", "support-lost", "stale", "source-failed")
+_TITLE: Final = 120
+
+Link = Callable[[str, str], str]
+"""(promise, version) -> address of the page about it; both empty: of the board."""
+
+
+@dataclass(frozen=True, slots=True)
+class Writer:
+    """Writes messages from what the ledger holds; the same notices give the same sentences however often they are tried."""
+
+    archive: Archive
+    link: Link
+
+    def __call__(self, route: RouteSpec, message_id: str, notices: Sequence[Notice]) -> Message:
+        """The message of these notices, all of one look and route."""
+        head = self.archive.head(notices[0].look)
+        known = {(n.promise, n.version): self._standings(n) for n in notices}
+        items = tuple(self._item(notice, known[notice.promise, notice.version]) for notice in notices)
+        return Message(
+            id=message_id,
+            route=route.name,
+            type=_type(route, notices[0]),
+            source=f"urn:watcher:{quote(self.archive.ledger_id, safe='')}",
+            subject=_subject(items, head),
+            title=_title(items, head),
+            time=max(item.at for item in items),
+            head=head,
+            items=items,
+            standings=tuple(standing_json(s) for standings in known.values() for s in standings),
+            attachments=self._evidence(route, notices[0], head),
+        )
+
+    def _standings(self, notice: Notice) -> Sequence[Standing]:
+        return self.archive.standings(notice.promise, notice.version) if notice.promise else ()
+
+    def _item(self, notice: Notice, standings: Sequence[Standing]) -> Item:
+        terms = self._terms(notice)
+        if notice.event is None:
+            whole = standings[0] if standings else None
+            return Item(
+                key=notice.key,
+                kind=notice.kind,
+                promise=notice.promise,
+                version=notice.version,
+                column="",
+                value="",
+                at=notice.created,
+                sentence=sentences.periodic(notice, terms, whole),
+                advice=sentences.ADVICE[notice.kind],
+                where=self.link(notice.promise, notice.version),
+            )
+        stored = self.archive.event(notice.look, notice.event)
+        event = stored.event
+        own = next((s for s in standings if (s.column, s.value) == (event.column, event.value)), None)
+        return Item(
+            key=notice.key,
+            kind=event.kind,
+            promise=event.promise,
+            version=event.version,
+            column=event.column,
+            value=event.value,
+            at=stored.at,
+            sentence=sentences.sentence(event, terms, own),
+            advice=sentences.ADVICE.get(event.kind, "See the board."),
+            where=self.link(event.promise, event.version),
+            facts=event.facts,
+        )
+
+    def _terms(self, notice: Notice) -> Terms | None:
+        return self.archive.terms(notice.promise, notice.version) if notice.promise else None
+
+    def _evidence(self, route: RouteSpec, notice: Notice, head: Head) -> tuple[Attachment, ...]:
+        if not route.retrain:
+            return ()
+        archive, promise, version = self.archive, notice.promise, notice.version
+        return bundle(
+            archive.terms(promise, version),
+            archive.standings(promise, version),
+            archive.counts(promise, version),
+            head,
+        )
+
+
+def _type(route: RouteSpec, notice: Notice) -> str:
+    if route.retrain:
+        return "watcher.retraining"
+    return f"watcher.{notice.kind}" if notice.kind in PERIODIC else "watcher.notices"
+
+
+def _subject(items: Sequence[Item], head: Head) -> str:
+    about = {(item.promise, item.version) for item in items}
+    if len(about) == 1 and items[0].promise:
+        return f"{items[0].promise}/{items[0].version}"
+    return f"look/{head.look}"
+
+
+def _title(items: Sequence[Item], head: Head) -> str:
+    first = min(items, key=lambda item: _GRAVEST.index(item.kind) if item.kind in _GRAVEST else len(_GRAVEST))
+    about = safe(first.promise or "watcher", 40)
+    where = f" ({safe(first.column, 20)} = {safe(first.value, 20)})" if first.column else ""
+    more = f" and {len(items) - 1} more" if len(items) > 1 else ""
+    return safe(f"{about}: {first.kind}{where}{more} [look {head.look}]", _TITLE)
