@@ -73,6 +73,7 @@ class _Photo:
 
     parcel: str
     time: int
+    decided_at: str
     depot: str
     carrier: str
     predicted: str
@@ -84,7 +85,7 @@ class _Photo:
             arrived,
             self.parcel,
             revision,
-            _text(self.time),
+            self.decided_at,
             self.depot,
             self.carrier,
             self.predicted,
@@ -137,7 +138,7 @@ def _photo(draw: Random, parcel: str, time: int, day: int) -> _Photo:
     carrier = _pick(draw, CARRIERS)
     truth = CLASSES[0] if draw.random() < _DAMAGED else CLASSES[1]
     wrong = draw.random() < error_rate(depot, day)
-    return _Photo(parcel, time, depot, carrier, _other(truth) if wrong else truth, truth)
+    return _Photo(parcel, time, _text(time), depot, carrier, _other(truth) if wrong else truth, truth)
 
 
 def _lines(draw: Random, photo: _Photo) -> Iterator[Row]:
