@@ -21,10 +21,10 @@ _STACK: Final = 4
 
 
 def safe(text: str, limit: int | None = LIMIT) -> str:
-    """Outside text on one line: what cannot be seen as \\xNN, cut to `limit` characters, the last one then "…".
+    r"""Outside text on one line: what cannot be seen as \xNN, cut to `limit` characters, the last one then "…".
 
     `limit` >= 1, or None for no cut. The result holds printable characters and plain spaces only; it is NOT escaped for
-    HTML, which is the template's part. Code points beyond two hexadecimal digits are shown as \\uNNNN or \\UNNNNNNNN.
+    HTML, which is the template's part. Code points beyond two hexadecimal digits are shown as \uNNNN or \UNNNNNNNN.
     """
     shown: list[str] = []
     room = limit
