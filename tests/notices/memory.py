@@ -101,8 +101,8 @@ class Memory:
         """As `watcher notices` does it: waiting, due at once, the earlier answer kept."""
         self.notices[key] = replace(self.notices[key], state="waiting", tries=0, next_at=self.notices[key].created)
 
-    def head(self, look: int | None = None) -> Head:
-        return Head(max((n.look for n in self.notices.values()), default=0) if look is None else look, DIGEST)
+    def head(self) -> Head:
+        return Head(max((n.look for n in self.notices.values()), default=0), DIGEST)
 
     def event(self, look: int, n: int) -> StoredEvent:
         return self.events[look, n]
@@ -212,7 +212,9 @@ def some_counts(bucket: int, column: str = "", value: str = "", **counts: int) -
 
 
 def some_message(message_id: str = "", **changes: Any) -> Message:
-    item = Item("k1", "breach", "damage-photos", "1", "depot", "Birch", T0, "It broke.", "Look.", "", {"number": 1})
+    item = Item(
+        "k1", "breach", "damage-photos", "1", "depot", "Birch", T0, "It broke.", "Now so.", "Look.", "", {"number": 1}
+    )
     message = Message(
         id=message_id or digest("m"),
         route="desk",
@@ -221,6 +223,7 @@ def some_message(message_id: str = "", **changes: Any) -> Message:
         subject="damage-photos/1",
         title="damage-photos: breach [look 7]",
         time=T0,
+        look=7,
         head=Head(7, DIGEST),
         items=(item,),
     )

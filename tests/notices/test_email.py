@@ -66,7 +66,7 @@ def test_no_line_break_reaches_the_subject(certificates: Certificates) -> None:
         (mail,) = office.mails
 
     assert (delivery.outcome, mail["Bcc"]) == ("delivered", None)
-    assert mail["Subject"] == r"x\x0d\x0aBcc: thief@example.org\x0a\x0abody"
+    assert mail["Subject"] == "x Bcc: thief@example.org body"
 
 
 def test_hostile_text_is_escaped_in_the_html(certificates: Certificates) -> None:

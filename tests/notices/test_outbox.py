@@ -93,7 +93,7 @@ def test_a_heartbeat_does_not_hide_behind_the_message_of_its_look() -> None:
 def test_a_message_waits_behind_an_earlier_one_of_its_promise_and_passes_those_of_others() -> None:
     """Order holds per (route, promise): b's notice is not kept back by a's."""
     memory, clock = Memory(), Clock()
-    peer = Peer(lambda m: Delivery("temporary", "HTTP 404") if m.head.look == 1 and len(peer.tried) < 3 else OK)
+    peer = Peer(lambda m: Delivery("temporary", "HTTP 404") if m.look == 1 and len(peer.tried) < 3 else OK)
     a1, b2, a3 = (
         memory.happen(some_event(promise=p), look, 0, T0, "desk")[0] for look, p in ((1, "a"), (2, "b"), (3, "a"))
     )
@@ -109,7 +109,7 @@ def test_a_message_waits_behind_an_earlier_one_of_its_promise_and_passes_those_o
 def test_a_message_about_two_promises_waits_for_both() -> None:
     """And what comes after it waits for it."""
     memory, clock = Memory(), Clock()
-    peer = Peer(lambda m: Delivery("temporary", "HTTP 404") if m.head.look == 1 else OK)
+    peer = Peer(lambda m: Delivery("temporary", "HTTP 404") if m.look == 1 else OK)
     memory.happen(some_event(promise="a"), 1, 0, T0, "desk")
     memory.happen(some_event(promise="a"), 2, 0, T0, "desk")
     memory.happen(some_event(promise="b"), 2, 1, T0, "desk")
@@ -172,7 +172,7 @@ def test_a_kill_between_the_answer_and_our_record_delivers_exactly_twice_with_th
 def test_a_notice_is_dead_after_seven_days_and_then_blocks_nothing() -> None:
     """The next notice of the same promise is tried although it, too, is older than seven days."""
     memory, clock = Memory(), Clock()
-    peer = Peer(lambda m: Delivery("temporary", "HTTP 404") if m.head.look == 1 else OK)
+    peer = Peer(lambda m: Delivery("temporary", "HTTP 404") if m.look == 1 else OK)
     (first,) = memory.happen(some_event(), 1, 0, T0, "desk")
     (second,) = memory.happen(some_event(), 2, 0, T0, "desk")
     _run(memory, peer, clock, timedelta(days=7, hours=2), timedelta(minutes=10))

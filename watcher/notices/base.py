@@ -155,7 +155,9 @@ class Item:
     """The slice; both empty: the whole."""
     at: datetime
     sentence: str
-    """Plain words with numbers, window, dates and risk; safe to show anywhere."""
+    """What happened, in plain words with numbers, window, dates and risk; outside text in it is safe to show."""
+    now: str
+    """Where the promise or its slice stands when the message is written; "" where that is not known."""
     advice: str
     """What to do next."""
     where: str
@@ -179,8 +181,10 @@ class Message:
     title: str
     """One line for the subject of a mail; without control characters."""
     time: datetime
+    look: int
+    """The look that the notices belong to."""
     head: Head
-    """The look that the notices belong to and the digest of the chain up to it."""
+    """The newest look of the ledger when the message was written, and the digest of the chain up to it."""
     items: tuple[Item, ...]
     standings: tuple[Mapping[str, Any], ...] = ()
     """Where the promises named stand now, in the form of the look's JSON."""
@@ -247,8 +251,8 @@ class Archive(Protocol):
         """The ledger's own id."""
         ...
 
-    def head(self, look: int | None = None) -> Head:
-        """A look with the digest of the chain up to it; None: the newest."""
+    def head(self) -> Head:
+        """The newest look with the digest of the chain up to it."""
         ...
 
     def event(self, look: int, n: int) -> StoredEvent:

@@ -11,13 +11,12 @@ from typing import Final
 
 from watcher.answer import standing_json
 from watcher.notices.base import Attachment
-from watcher.notices.envelope import rfc3339
-from watcher.notices.outside import safe
+from watcher.notices.envelope import finite, rfc3339
 from watcher.records import INTEGERS, CellCounts, Head, Standing, Terms
+from watcher.text import csv_cell
 
 MOST: Final = 524_288
 """Characters of the CSV that travel; receivers commonly take 1 MiB. The oldest buckets give way, and it is said."""
-_FORMULA: Final = ("=", "+", "-", "@")
 
 
 def bundle(
@@ -31,7 +30,7 @@ def bundle(
         "version": terms.version,
         "head": str(head),
         "released": rfc3339(datetime.fromtimestamp(terms.released, UTC)),
-        "standings": [standing_json(standing) for standing in standings],
+        "standings": [finite(standing_json(standing)) for standing in standings],
         "counts_left_out": left_out,
     }
     return (
@@ -67,16 +66,11 @@ def _order(row: CellCounts) -> tuple[int, str, str, str]:
 def _cells(row: CellCounts) -> tuple[str | int, ...]:
     integers = (getattr(row.counts, name) for name in INTEGERS)
     newest = "" if row.counts.newest is None else _time(row.counts.newest)
-    return (_time(row.bucket), _plain(row.column), _plain(row.value), row.level, *integers, newest)
+    return (_time(row.bucket), csv_cell(row.column), csv_cell(row.value), row.level, *integers, newest)
 
 
 def _time(epoch: int) -> str:
     return rfc3339(datetime.fromtimestamp(epoch, UTC))
-
-
-def _plain(text: str) -> str:
-    shown = safe(text)
-    return f"'{shown}" if shown.startswith(_FORMULA) else shown
 
 
 def _line(cells: Sequence[str | int]) -> str:

@@ -12,8 +12,7 @@ from typing import IO, Final
 
 from watcher.notices.base import CommandTarget, Delivery, Message
 from watcher.notices.envelope import body
-from watcher.notices.outside import safe
-from watcher.notices.reply import read_answer
+from watcher.notices.reply import excerpt, read_answer
 
 REFUSED: Final = 65
 """EX_DATAERR: the program says that it will never take this message."""
@@ -43,7 +42,7 @@ class CommandSender:
             )
         except (OSError, ValueError) as error:
             why = error.strerror if isinstance(error, OSError) else str(error)
-            return Delivery("temporary", f"cannot be started: {safe(str(why))}", unreachable=True)
+            return Delivery("temporary", f"cannot be started: {excerpt(str(why))}", unreachable=True)
         return _finish(program, body(message), target.timeout)
 
 
@@ -103,8 +102,8 @@ def judge(code: int, output: bytes, errors: bytes) -> Delivery:
     if code == 0:
         return Delivery("delivered", "exit 0", status=said, reference=reference)
     ended = f"exit {code}" if code > 0 else f"ended by signal {-code}"
-    excerpt = safe(errors.decode("utf-8", "replace"))
-    told = f"{ended}: {excerpt}" if excerpt else ended
+    complaint = excerpt(errors)
+    told = f"{ended}: {complaint}" if complaint else ended
     if code == REFUSED:
         return Delivery("permanent", told, status=said, reference=reference)
     return Delivery("temporary", told)

@@ -9,6 +9,7 @@ from typing import Final, Literal
 from zoneinfo import ZoneInfo
 
 from watcher.notices.base import RouteSpec
+from watcher.records import Notice
 
 DAY: Final = 86400
 _DAYS: Final = ("mon", "tue", "wed", "thu", "fri", "sat", "sun")
@@ -71,6 +72,25 @@ def due_now(
                 subject = f"{plan.promise}/{plan.version}"
                 found.append(Due(route.name, "report", subject, start, plan.promise, plan.version))
     return found
+
+
+def notice_of(due: Due, key: str, look: int, now: datetime) -> Notice:
+    """The row of the outbox for what is due; `key` as the ledger derives it, `look` the newest one."""
+    return Notice(
+        key=key,
+        route=due.route,
+        kind=due.kind,
+        promise=due.promise,
+        version=due.version,
+        look=look,
+        event=None,
+        state="waiting",
+        tries=0,
+        next_at=now,
+        created=now,
+        answer=None,
+        breach_number=due.breach_number,
+    )
 
 
 def week_start(at: str, time_zone: str, now: datetime) -> int:

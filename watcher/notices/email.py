@@ -9,8 +9,9 @@ from email.message import EmailMessage
 from email.utils import format_datetime
 
 from watcher.notices.base import Delivery, MailTarget, Message
-from watcher.notices.outside import safe
 from watcher.notices.pages import html, text
+from watcher.notices.reply import excerpt
+from watcher.text import mail_subject, safe
 
 
 class MailSender:
@@ -42,9 +43,9 @@ class MailSender:
             told = _reply(error.smtp_code, error.smtp_error)
             return Delivery("temporary", f"server refused the session: {told}", unreachable=True)
         except ssl.SSLCertVerificationError as error:
-            return Delivery("temporary", f"certificate not trusted: {safe(error.verify_message)}", unreachable=True)
+            return Delivery("temporary", f"certificate not trusted: {excerpt(error.verify_message)}", unreachable=True)
         except (smtplib.SMTPException, OSError) as error:
-            return Delivery("temporary", f"{type(error).__name__}: {safe(str(error))}", unreachable=True)
+            return Delivery("temporary", f"{type(error).__name__}: {excerpt(str(error))}", unreachable=True)
         return _accepted(len(self._target.to), refused)
 
     def _session(self) -> smtplib.SMTP:
@@ -72,7 +73,7 @@ def compose(message: Message, target: MailTarget) -> EmailMessage:
     mail = EmailMessage(policy=policy.SMTP)
     mail["From"] = target.sender
     mail["To"] = ", ".join(target.to)
-    mail["Subject"] = safe(message.title)
+    mail["Subject"] = mail_subject(message.title)
     mail["Date"] = format_datetime(message.time)
     mail["Message-ID"] = f"<{message.id}@{target.sender.rpartition('@')[2]}>"
     mail["Auto-Submitted"] = "auto-generated"
@@ -103,5 +104,4 @@ def _by_code(code: int, reply: bytes | str) -> Delivery:
 
 
 def _reply(code: int, reply: bytes | str) -> str:
-    shown = reply.decode("utf-8", "replace") if isinstance(reply, bytes) else reply
-    return f"SMTP {code} {safe(shown)}"
+    return f"SMTP {code} {excerpt(reply)}"

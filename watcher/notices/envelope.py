@@ -10,7 +10,8 @@ import binascii
 import hashlib
 import hmac
 import json
-from collections.abc import Sequence
+import math
+from collections.abc import Mapping, Sequence
 from datetime import UTC, datetime
 from typing import Any, Final
 
@@ -45,11 +46,11 @@ def data(message: Message) -> dict[str, Any]:
     told: dict[str, Any] = {
         "route": message.route,
         "title": message.title,
-        "look": message.head.look,
+        "look": message.look,
         "head": str(message.head),
         "keys": [item.key for item in message.items],
         "notices": [_item(item) for item in message.items],
-        "standings": [dict(standing) for standing in message.standings],
+        "standings": [finite(standing) for standing in message.standings],
     }
     if message.attachments:
         told["evidence"] = {
@@ -99,7 +100,19 @@ def _item(item: Item) -> dict[str, Any]:
         "slice": {"column": item.column, "value": item.value} if item.column else None,
         "at": rfc3339(item.at),
         "sentence": item.sentence,
+        "now": item.now or None,
         "advice": item.advice,
         "where": item.where or None,
-        "facts": dict(item.facts),
+        "facts": finite(item.facts),
     }
+
+
+def finite(value: Any) -> Any:
+    """The same with null for infinities and NaN, which JSON does not know (a total before the first label is -inf)."""
+    if isinstance(value, float):
+        return value if math.isfinite(value) else None
+    if isinstance(value, Mapping):
+        return {str(key): finite(inner) for key, inner in value.items()}
+    if isinstance(value, list | tuple):
+        return [finite(inner) for inner in value]
+    return value

@@ -35,7 +35,7 @@ class LogSender:
                     slice=f"{item.column}={item.value}" if item.column else "",
                     key=item.key,
                     message=message.id,
-                    look=message.head.look,
+                    look=message.look,
                     head=str(message.head),
                 )
         except (OSError, ValueError) as error:

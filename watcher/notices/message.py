@@ -11,8 +11,8 @@ from watcher.answer import standing_json
 from watcher.notices import sentences
 from watcher.notices.base import PERIODIC, Archive, Attachment, Item, Message, RouteSpec
 from watcher.notices.bundle import bundle
-from watcher.notices.outside import safe
-from watcher.records import Head, Notice, Standing, Terms
+from watcher.records import Notice, Standing, Terms
+from watcher.text import safe
 
 _GRAVEST: Final = ("breach", "breach-withdrawn", "warning", "support-lost", "stale", "source-failed")
 _TITLE: Final = 120
@@ -27,10 +27,12 @@ class Writer:
 
     archive: Archive
     link: Link
+    unit: Callable[[str, str], str] = lambda _promise, _version: "sample"
+    """(promise, version) -> the noun of the configuration."""
 
     def __call__(self, route: RouteSpec, message_id: str, notices: Sequence[Notice]) -> Message:
         """The message of these notices, all of one look and route."""
-        head = self.archive.head(notices[0].look)
+        look = notices[0].look
         known = {(n.promise, n.version): self._standings(n) for n in notices}
         items = tuple(self._item(notice, known[notice.promise, notice.version]) for notice in notices)
         return Message(
@@ -38,35 +40,43 @@ class Writer:
             route=route.name,
             type=_type(route, notices[0]),
             source=f"urn:watcher:{quote(self.archive.ledger_id, safe='')}",
-            subject=_subject(items, head),
-            title=_title(items, head),
+            subject=_subject(items, look),
+            title=_title(items, look),
             time=max(item.at for item in items),
-            head=head,
+            look=look,
+            head=self.archive.head(),
             items=items,
             standings=tuple(standing_json(s) for standings in known.values() for s in standings),
-            attachments=self._evidence(route, notices[0], head),
+            attachments=self._evidence(route, notices[0]),
         )
 
     def _standings(self, notice: Notice) -> Sequence[Standing]:
         return self.archive.standings(notice.promise, notice.version) if notice.promise else ()
 
     def _item(self, notice: Notice, standings: Sequence[Standing]) -> Item:
-        terms = self._terms(notice)
-        if notice.event is None:
-            whole = standings[0] if standings else None
-            return Item(
-                key=notice.key,
-                kind=notice.kind,
-                promise=notice.promise,
-                version=notice.version,
-                column="",
-                value="",
-                at=notice.created,
-                sentence=sentences.periodic(notice, terms, whole),
-                advice=sentences.ADVICE[notice.kind],
-                where=self.link(notice.promise, notice.version),
-            )
-        stored = self.archive.event(notice.look, notice.event)
+        return (
+            self._periodic(notice, standings) if notice.event is None else self._event(notice, notice.event, standings)
+        )
+
+    def _periodic(self, notice: Notice, standings: Sequence[Standing]) -> Item:
+        terms, whole = self._terms(notice), standings[0] if standings else None
+        sentence, advice = sentences.periodic(notice, terms, whole)
+        return Item(
+            key=notice.key,
+            kind=notice.kind,
+            promise=notice.promise,
+            version=notice.version,
+            column="",
+            value="",
+            at=notice.created,
+            sentence=sentence,
+            now=sentences.now(whole, terms, self.unit(notice.promise, notice.version)),
+            advice=advice,
+            where=self.link(notice.promise, notice.version),
+        )
+
+    def _event(self, notice: Notice, n: int, standings: Sequence[Standing]) -> Item:
+        stored, terms = self.archive.event(notice.look, n), self._terms(notice)
         event = stored.event
         own = next((s for s in standings if (s.column, s.value) == (event.column, event.value)), None)
         return Item(
@@ -77,8 +87,9 @@ class Writer:
             column=event.column,
             value=event.value,
             at=stored.at,
-            sentence=sentences.sentence(event, terms, own),
-            advice=sentences.ADVICE.get(event.kind, "See the board."),
+            sentence=sentences.told(event, terms),
+            now=sentences.now(own, terms, self.unit(event.promise, event.version)),
+            advice=sentences.advice(event, own),
             where=self.link(event.promise, event.version),
             facts=event.facts,
         )
@@ -86,7 +97,7 @@ class Writer:
     def _terms(self, notice: Notice) -> Terms | None:
         return self.archive.terms(notice.promise, notice.version) if notice.promise else None
 
-    def _evidence(self, route: RouteSpec, notice: Notice, head: Head) -> tuple[Attachment, ...]:
+    def _evidence(self, route: RouteSpec, notice: Notice) -> tuple[Attachment, ...]:
         if not route.retrain:
             return ()
         archive, promise, version = self.archive, notice.promise, notice.version
@@ -94,7 +105,7 @@ class Writer:
             archive.terms(promise, version),
             archive.standings(promise, version),
             archive.counts(promise, version),
-            head,
+            archive.head(),
         )
 
 
@@ -104,16 +115,16 @@ def _type(route: RouteSpec, notice: Notice) -> str:
     return f"watcher.{notice.kind}" if notice.kind in PERIODIC else "watcher.notices"
 
 
-def _subject(items: Sequence[Item], head: Head) -> str:
+def _subject(items: Sequence[Item], look: int) -> str:
     about = {(item.promise, item.version) for item in items}
     if len(about) == 1 and items[0].promise:
         return f"{items[0].promise}/{items[0].version}"
-    return f"look/{head.look}"
+    return f"look/{look}"
 
 
-def _title(items: Sequence[Item], head: Head) -> str:
+def _title(items: Sequence[Item], look: int) -> str:
     first = min(items, key=lambda item: _GRAVEST.index(item.kind) if item.kind in _GRAVEST else len(_GRAVEST))
     about = safe(first.promise or "watcher", 40)
     where = f" ({safe(first.column, 20)} = {safe(first.value, 20)})" if first.column else ""
     more = f" and {len(items) - 1} more" if len(items) > 1 else ""
-    return safe(f"{about}: {first.kind}{where}{more} [look {head.look}]", _TITLE)
+    return safe(f"{about}: {first.kind}{where}{more} [look {look}]", _TITLE)

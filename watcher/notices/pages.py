@@ -5,21 +5,17 @@ from __future__ import annotations
 from html import escape
 
 from watcher.notices.base import Item, Message
-
-CAUTION = (
-    "A verdict is about the labelled samples and how they were drawn; it is no proof of safety, and watcher must not be "
-    "the only safeguard."
-)
+from watcher.wording import CAUTIONS
 
 
 def text(message: Message) -> str:
     """The message as plain text."""
     parts = [message.title, ""]
     for item in message.items:
-        parts += [item.sentence, f"What to do: {item.advice}"]
+        parts += [item.sentence, *([f"Now: {item.now}"] if item.now else []), f"What to do: {item.advice}"]
         parts += [f"Where to look: {item.where}"] if item.where else []
         parts += [f"Key: {item.key}", ""]
-    return "\n".join([*parts, _foot(message), CAUTION, ""])
+    return "\n".join([*parts, _foot(message), CAUTIONS, ""])
 
 
 def html(message: Message) -> str:
@@ -30,7 +26,7 @@ def html(message: Message) -> str:
         f"<title>{escape(message.title)}</title></head>\n"
         '<body style="font-family: sans-serif; max-width: 40em; line-height: 1.5">\n'
         f"<h1>{escape(message.title)}</h1>\n{items}\n"
-        f'<p style="color: #555; overflow-wrap: anywhere">{escape(_foot(message))}<br>{escape(CAUTION)}</p>\n</body></html>\n'
+        f'<p style="color: #555; overflow-wrap: anywhere">{escape(_foot(message))}<br>{escape(CAUTIONS)}</p>\n</body></html>\n'
     )
 
 
@@ -39,11 +35,12 @@ def _item(item: Item) -> str:
     # Only web addresses become links: a configured address is trusted, but a link is followed by a click.
     if item.where.startswith(("http://", "https://")):
         where = f'<br>Where to look: <a href="{escape(item.where)}">{escape(item.where)}</a>'
+    now = f"<br>Now: {escape(item.now)}" if item.now else ""
     return (
-        f"<p><strong>{escape(item.sentence)}</strong><br>What to do: {escape(item.advice)}{where}<br>"
+        f"<p><strong>{escape(item.sentence)}</strong>{now}<br>What to do: {escape(item.advice)}{where}<br>"
         f"<small>Key: {escape(item.key)}</small></p>"
     )
 
 
 def _foot(message: Message) -> str:
-    return f"Look {message.head.look}, head {message.head}. Message {message.id}."
+    return f"Look {message.look}, head {message.head}. Message {message.id}."

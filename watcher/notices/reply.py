@@ -5,8 +5,9 @@ from __future__ import annotations
 import json
 from typing import Final, Literal
 
-from watcher.notices.outside import safe
+from watcher.text import safe
 
+_EXCERPT: Final = 200
 _REFERENCE: Final = 80
 """Characters of a reference that are kept."""
 
@@ -27,3 +28,9 @@ def read_answer(payload: bytes) -> tuple[Status | None, str | None]:
     status, reference = told.get("status"), told.get("reference")
     kept = safe(str(reference), _REFERENCE) if isinstance(reference, str | int) and reference != "" else None
     return (status if status in ("accepted", "refused") else None), kept
+
+
+def excerpt(text: bytes | str) -> str:
+    """The beginning of what a receiver said, on one safe line."""
+    shown = text.decode("utf-8", "replace") if isinstance(text, bytes) else text
+    return safe(shown.strip(), _EXCERPT)

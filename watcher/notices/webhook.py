@@ -12,8 +12,7 @@ import httpx
 
 from watcher.notices.base import Delivery, Message, WebhookTarget
 from watcher.notices.envelope import CONTENT_TYPE, body, secret_bytes, signature
-from watcher.notices.outside import safe
-from watcher.notices.reply import read_answer
+from watcher.notices.reply import excerpt, read_answer
 
 _READ: Final = 65536
 """Bytes of an answer that are read; the rest is not wanted."""
@@ -103,9 +102,9 @@ def judge(status: int, payload: bytes) -> Delivery:
         return Delivery("permanent", told, status=said, reference=reference)
     if httpx.codes.is_redirect(status):
         return Delivery("temporary", f"{told}: redirects are not followed; write the final address", unreachable=True)
-    excerpt = safe(payload.decode("utf-8", "replace"))
+    body_told = excerpt(payload)
     unreachable = httpx.codes.is_server_error(status) or status == httpx.codes.TOO_MANY_REQUESTS
-    return Delivery("temporary", f"{told}: {excerpt}" if excerpt else told, unreachable=unreachable)
+    return Delivery("temporary", f"{told}: {body_told}" if body_told else told, unreachable=unreachable)
 
 
 async def _beginning(response: httpx.Response) -> bytes:
@@ -122,6 +121,6 @@ def _told(error: httpx.TransportError) -> str:
     cause: BaseException | None = error
     while cause is not None:
         if isinstance(cause, ssl.SSLCertVerificationError):
-            return f"certificate not trusted: {safe(cause.verify_message)}"
+            return f"certificate not trusted: {excerpt(cause.verify_message)}"
         cause = cause.__cause__ or cause.__context__
-    return f"{type(error).__name__}: {safe(str(error))}" if str(error) else type(error).__name__
+    return f"{type(error).__name__}: {excerpt(str(error))}" if str(error) else type(error).__name__
