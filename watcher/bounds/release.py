@@ -13,14 +13,16 @@ from typing import Final
 
 import numpy as np
 from numpy.typing import ArrayLike
-from scipy.special import bdtr, betainccinv, betaincinv
+from scipy.special import bdtr
 
+from watcher.bounds.arguments import fraction, fractions
 from watcher.bounds.evidence import lower_limit, upper_limit
+from watcher.bounds.exact import exact_bounds, exact_upper
 from watcher.bounds.mixture import Floats
 from watcher.bounds.weighted import Weighted
 
 _OUTWARD: Final = 1e-12
-"""Relative step outward, above the error of the inverse beta function (below 1e-13 where compared with bisection)."""
+"""Relative step outward, above the rounding error of a logarithm and a root."""
 _MOST_LABELS: Final = 10_000_000
 PAIRS: Final = Weighted(("0.5", "1"))
 """Old and new model on the same samples: a tie scores 1/2, an error of the new one alone 1, of the old one alone 0."""
@@ -94,31 +96,12 @@ def certify(labels: int, errors: int, risk: float, models: int = 1) -> Certifica
     0.0274
     """
     _counts(labels, errors)
-    _chance("risk", risk)
+    fraction("risk", risk)
     _at_least_one("models", models)
     log_share = math.log(models / risk)
     hoeffding = min(1.0, errors / labels + math.sqrt(log_share / (2.0 * labels)))
     exact = float(exact_upper(labels, errors, risk / models))
     return Certificate(labels, errors, risk, models, errors / labels, exact, hoeffding)
-
-
-def exact_upper(labels: ArrayLike, errors: ArrayLike, risk: ArrayLike) -> Floats:
-    """The largest rate at which `errors` or fewer in `labels` still have chance `risk`, rounded up; broadcasts.
-
-    1 where every label is an error. Valid for one look at a sample of fixed size (Clopper, Pearson 1934).
-    """
-    n, k, r = (np.asarray(value, dtype=np.float64) for value in (labels, errors, risk))
-    every = k >= n
-    found = betainccinv(np.where(every, 1.0, k + 1.0), np.where(every, 1.0, n - k), r)
-    return np.asarray(np.where(every, 1.0, np.minimum(found * (1.0 + _OUTWARD), 1.0)))
-
-
-def exact_lower(labels: ArrayLike, errors: ArrayLike, risk: ArrayLike) -> Floats:
-    """The smallest rate at which `errors` or more in `labels` still have chance `risk`, rounded down; broadcasts."""
-    n, k, r = (np.asarray(value, dtype=np.float64) for value in (labels, errors, risk))
-    none = k <= 0
-    found = betaincinv(np.where(none, 1.0, k), np.where(none, 1.0, n - k + 1.0), r)
-    return np.asarray(np.where(none, 0.0, found * (1.0 - _OUTWARD)))
 
 
 def growth(points: int, dimension: int) -> int:
@@ -143,13 +126,13 @@ def vc_deviation(labels: int, dimension: int, risk: float) -> float:
     """
     _at_least_one("labels", labels)
     _at_least_one("dimension", dimension)
-    _chance("risk", risk)
+    fraction("risk", risk)
     return math.sqrt(8.0 * _log_ratio(4 * growth(2 * labels, dimension), risk) / labels) * (1.0 + _OUTWARD)
 
 
 def vc_labels(dimension: int, deviation: float, risk: float) -> int:
     """The smallest n from which on `vc_deviation` is at most `deviation`."""
-    _chance("deviation", deviation)
+    fraction("deviation", deviation)
     low, high = 1, 1
     while vc_deviation(high, dimension, risk) > deviation:
         low, high = high, 2 * high
@@ -175,7 +158,7 @@ def finite_deviation(labels: int, size: int, risk: float, sides: int = 1) -> flo
     """sqrt(log(sides*size/risk)/(2n)): Hoeffding's bound and a union over the class, one or two sides."""
     _at_least_one("labels", labels)
     _at_least_one("size", size)
-    _chance("risk", risk)
+    fraction("risk", risk)
     if sides not in (1, 2):
         raise ValueError(f"sides = {sides!r}: 1 (true above training error only) or 2 is allowed")
     return math.sqrt(_log_ratio(sides * size, risk) / (2.0 * labels)) * (1.0 + _OUTWARD)
@@ -188,8 +171,8 @@ def finite_labels(size: int, deviation: float, risk: float, sides: int = 1, *, c
     bad hypotheses); else log(sides*size/risk)/(2 deviation^2).
     """
     _at_least_one("size", size)
-    _chance("deviation", deviation)
-    _chance("risk", risk)
+    fraction("deviation", deviation)
+    fraction("risk", risk)
     if sides not in (1, 2):
         raise ValueError(f"sides = {sides!r}: 1 (true above training error only) or 2 is allowed")
     if consistent:
@@ -214,12 +197,12 @@ def relative(labels: int, errors: int, margin: float, risk: float, baseline_risk
     baseline's upper limit to be wrong or the test at `Relative.risk` to be: together at most `risk`; support likewise.
     """
     _counts(labels, errors)
-    _chance("risk", risk)
+    fraction("risk", risk)
     _margin(margin)
     if not 0.0 < baseline_risk < risk:
         raise ValueError(f"baseline_risk = {baseline_risk!r}: a number above 0 and below risk = {risk!r} is allowed")
     upper = min(1.0, float(exact_upper(labels, errors, baseline_risk)) + margin)
-    lower = float(exact_lower(labels, errors, baseline_risk)) + margin
+    lower = float(exact_bounds(labels, errors, min(2.0 * baseline_risk, 1.0 - 1e-16)).lower) + margin
     left = float(np.nextafter(risk - baseline_risk, 0.0))
     return Relative(min(1.0, float(np.nextafter(upper, 2.0))), float(np.nextafter(lower, 0.0)), left, baseline_risk)
 
@@ -250,10 +233,7 @@ def paired_difference(labels: ArrayLike, worse: ArrayLike, better: ArrayLike, ri
 
     Valid at all times at once (betting form of method.md section 5); in [-1, 1], rounded outward.
     """
-    chance = np.asarray(risk, dtype=np.float64)
-    if not ((chance > 0.0) & (chance < 1.0)).all():
-        raise ValueError(f"risk = {risk!r}: numbers strictly between 0 and 1 are allowed")
-    statistics, threshold = paired_statistic(labels, worse, better), -np.log(chance)
+    statistics, threshold = paired_statistic(labels, worse, better), -np.log(fractions("risk", risk))
     lower = lower_limit(statistics, threshold, design=PAIRS)
     upper = upper_limit(statistics, threshold, design=PAIRS)
     # 2m - 1 is exact for m in [1/4, 1] and off by half a unit below; one step outward covers it.
@@ -268,10 +248,8 @@ def labels_for_errors(
 
     The label budget of acceptance sampling (Wilks 1941): P(Bin(n, tolerance) <= errors) <= risk.
     """
-    rate, chance, k = np.broadcast_arrays(*(np.asarray(value, dtype=np.float64) for value in (tolerance, risk, errors)))
-    for name, value in (("tolerance", rate), ("risk", chance)):
-        if not ((value > 0.0) & (value < 1.0)).all():
-            raise ValueError(f"{name}: numbers strictly between 0 and 1 are allowed")
+    rate, chance = fractions("tolerance", tolerance), fractions("risk", risk)
+    rate, chance, k = np.broadcast_arrays(rate, chance, np.asarray(errors, dtype=np.float64))
     if not (k >= 0).all():
         raise ValueError("errors: counts from 0 on are allowed")
     low, high = k.astype(np.int64), (k + 1.0).astype(np.int64)
@@ -292,7 +270,7 @@ def labels_needed(tolerance: float, risk: float, power: float, rate: float) -> L
     0 < `rate` < `tolerance` < 1, `risk` and `power` in (0, 1). Exact binomial; ValueError when 10 million are not enough.
     """
     for name, value in (("tolerance", tolerance), ("risk", risk), ("power", power)):
-        _chance(name, value)
+        fraction(name, value)
     if not 0.0 <= rate < tolerance:
         raise ValueError(f"rate = {rate!r}: a number from 0 to below tolerance = {tolerance!r} is allowed")
     first, block = 0, 64
@@ -320,22 +298,21 @@ def _log_ratio(count: int, risk: float) -> float:
 
 def _counts(labels: int, errors: int) -> None:
     _at_least_one("labels", labels)
-    if not isinstance(errors, int | np.integer) or not 0 <= errors <= labels:
+    if not 0 <= _whole(errors) <= labels:
         raise ValueError(f"errors = {errors!r}: a whole number from 0 to labels = {labels!r} is allowed")
 
 
 def _at_least_one(name: str, value: int) -> None:
-    try:
-        whole = operator.index(value)
-    except TypeError:
-        whole = 0
-    if whole < 1:
+    if _whole(value) < 1:
         raise ValueError(f"{name} = {value!r}: a whole number from 1 on is allowed")
 
 
-def _chance(name: str, value: float) -> None:
-    if not 0.0 < value < 1.0:
-        raise ValueError(f"{name} = {value!r}: a number strictly between 0 and 1 is allowed")
+def _whole(value: object) -> int:
+    """The integer, -1 for anything else (a fractional count would pass for a loss, which is refused here)."""
+    try:
+        return operator.index(value)  # type: ignore[arg-type]
+    except TypeError:
+        return -1
 
 
 def _margin(margin: float) -> None:
