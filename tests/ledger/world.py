@@ -196,7 +196,9 @@ class World:
         self.rate = rate
         self.known: dict[tuple[str, str], set[int]] = {}
 
-    def entry(self, at: int, expected: int, *, source: str = "desk", extra: tuple[Event, ...] = (), **more: Any) -> Entry:
+    def entry(
+        self, at: int, expected: int, *, source: str = "desk", extra: tuple[Event, ...] = (), **more: Any
+    ) -> Entry:
         """One look at `at`: the open buckets grow, those that are due are sealed."""
         drafts = tuple(self._draft(t, at) for t in self.promises if t.source == source)
         return self.judged(Entry(source, at, "pull", METHOD, expected, drafts, (), **more), extra)

@@ -54,7 +54,9 @@ class CountTable:
             strict=True,
         )
         made = [
-            CellCounts(keys[cell][0], keys[cell][1], bucket, level, counts_of(integers, None if newest == NEVER else newest))
+            CellCounts(
+                keys[cell][0], keys[cell][1], bucket, level, counts_of(integers, None if newest == NEVER else newest)
+            )
             for cell, bucket, level, integers, newest in rows
         ]
         return sorted(made, key=lambda c: (c.column, c.value, c.bucket, c.level))
