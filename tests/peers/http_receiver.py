@@ -42,10 +42,10 @@ class Receiver:
 
 
 @contextlib.contextmanager
-def receiver(tls: ssl.SSLContext | None = None) -> Iterator[Receiver]:
-    """Serve until the end of the block; `tls` with a certificate for `localhost`."""
+def receiver(tls: ssl.SSLContext | None = None, port: int = 0) -> Iterator[Receiver]:
+    """Serve until the end of the block; `tls` with a certificate for `localhost`; `port` 0 for a free one."""
     kept = Receiver()
-    server = ThreadingHTTPServer(("127.0.0.1", 0), _handler(kept))
+    server = ThreadingHTTPServer(("127.0.0.1", port), _handler(kept))
     server.daemon_threads = True
     if tls is not None:
         # The handshake must happen in the worker's thread: in the accepting one a refused certificate stops the server.

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from datetime import datetime
 from typing import Any, Final, Protocol
 
@@ -54,6 +54,8 @@ class Booked:
 
     store: Store
     message_key: Callable[[str, str, int], str]
+    _known: dict[tuple[str, str], StoredTerm] = field(default_factory=dict, init=False, repr=False)
+    """Terms are frozen, so what was read once stays true."""
 
     @property
     def ledger_id(self) -> str:
@@ -114,9 +116,11 @@ class Booked:
         return self.store.counts(self._term(promise, version).id)
 
     def _term(self, promise: str, version: str) -> StoredTerm:
-        for term in self.store.terms(open_only=False):
-            if (term.terms.promise, term.terms.version) == (promise, version):
-                return term
+        if (promise, version) not in self._known:
+            found = self.store.terms(open_only=False)
+            self._known.update({(term.terms.promise, term.terms.version): term for term in found})
+        if (promise, version) in self._known:
+            return self._known[promise, version]
         raise LookupError(f"promise {promise!r} version {version!r} is not in the ledger")
 
 

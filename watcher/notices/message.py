@@ -33,7 +33,8 @@ class Writer:
     def __call__(self, route: RouteSpec, message_id: str, notices: Sequence[Notice]) -> Message:
         """The message of these notices, all of one look and route."""
         look = notices[0].look
-        known = {(n.promise, n.version): self._standings(n) for n in notices}
+        about = dict.fromkeys((n.promise, n.version) for n in notices)
+        known = {name: self._standings(*name) for name in about}
         items = tuple(self._item(notice, known[notice.promise, notice.version]) for notice in notices)
         return Message(
             id=message_id,
@@ -50,8 +51,8 @@ class Writer:
             attachments=self._evidence(route, notices[0]),
         )
 
-    def _standings(self, notice: Notice) -> Sequence[Standing]:
-        return self.archive.standings(notice.promise, notice.version) if notice.promise else ()
+    def _standings(self, promise: str, version: str) -> Sequence[Standing]:
+        return self.archive.standings(promise, version) if promise else ()
 
     def _item(self, notice: Notice, standings: Sequence[Standing]) -> Item:
         return (
