@@ -24,8 +24,8 @@ def evidence(labels: ArrayLike, errors: ArrayLike, rate: ArrayLike, side: Side =
     reaches log(1/risk) is at most the risk, whatever the drift (Ville 1939; Robbins 1970). Raises ValueError for
     impossible counts, rates or sides.
 
-    Example: 126 errors in 3,000 labels against a tolerance of 0.03 give `evidence(3000, 126, 0.03)` = 4.50 nats, the
-    same 4.2% in 6,000 labels 10.9: more than log(1/0.001) = 6.9.
+    Example: 126 errors in 3,000 labels against a tolerance of 0.03 give `evidence(3000, 126, 0.03)` = 4.4 nats, the
+    same 4.2% in 6,000 labels 10.7: more than log(1/0.001) = 6.9.
     """
     arguments.side(side)
     statistics, rates = arguments.statistics(labels, errors), arguments.fractions("rate", rate)

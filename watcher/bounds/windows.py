@@ -282,9 +282,11 @@ def _each(windows: Rows, rate: float, side: Side, design: Design) -> Floats:
 
 
 def _root(reaches: Callable[[float], bool], low: float, high: float) -> float:
-    """The largest rate in [low, high) that reaches, to a relative 1e-12, rounded down; `low` where none does."""
-    if low == 0.0 and not reaches(0.0):
-        return 0.0
+    """The largest rate in [low, high] that reaches, to a relative 1e-12, rounded down; `low` where none does."""
+    if reaches(high):
+        return high
+    if not reaches(low):
+        return low
     while high - low > 1e-12 * high:
         middle = 0.5 * (low + high)
         low, high = (middle, high) if reaches(middle) else (low, middle)
