@@ -17,7 +17,9 @@ def source_spec(settings: Settings, table: SourceTable) -> SourceSpec:
         try:
             query = (settings.folder / table.query_file).read_text(encoding="utf-8")
         except OSError as error:
-            raise SettingsError([f"source {table.name!r}: query_file = {table.query_file!r}: cannot be read ({error.strerror})"]) from None
+            raise SettingsError(
+                [f"source {table.name!r}: query_file = {table.query_file!r}: cannot be read ({error.strerror})"]
+            ) from None
     return SourceSpec(
         name=table.name,
         kind=table.kind,
@@ -43,7 +45,12 @@ def watched(settings: Settings, source: str) -> list[Watched]:
     """The promises that rest on a source, as the configuration has them now."""
     table = settings.source_of(source)
     return [
-        Watched(promise.terms(table), promise.staleness, promise.uncertified or promise.release_evidence is None, promise.retired)
+        Watched(
+            promise.terms(table),
+            promise.staleness,
+            promise.uncertified or promise.release_evidence is None,
+            promise.retired,
+        )
         for promise in settings.promise
         if promise.source == source
     ]
@@ -52,7 +59,8 @@ def watched(settings: Settings, source: str) -> list[Watched]:
 def routings(settings: Settings) -> list[Routing]:
     """What a look must know of the routes."""
     return [
-        Routing(route.name, frozenset(route.events), route.retrain, frozenset(route.promises)) for route in settings.route
+        Routing(route.name, frozenset(route.events), route.retrain, frozenset(route.promises))
+        for route in settings.route
     ]
 
 

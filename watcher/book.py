@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping, Sequence
+from itertools import pairwise
 
 from watcher.bounds.parts import declared_parts, discovered_part, part_of_whole
 from watcher.buckets import bucket_starts
@@ -49,7 +50,7 @@ def sealing(terms: Terms, sealed_until: int, now: int) -> tuple[tuple[int, ...],
     """Starts of the buckets that a successful look at `now` seals, and the end of the newest one."""
     starts = bucket_starts(terms.released, now - terms.label_lag, terms.bucket, terms.time_zone)
     done, end = [], sealed_until
-    for start, stop in zip(starts, starts[1:], strict=False):
+    for start, stop in pairwise(starts):
         if start >= sealed_until and stop + terms.label_lag <= now:
             done.append(start)
             end = stop

@@ -79,7 +79,7 @@ def _evidence(promise: PromiseTable, source: SourceTable) -> Iterator[Finding]:
     elif promise.measure == "loss":
         yield Finding("warning", about, "release_evidence counts errors and cannot bear out a promise about a loss")
     else:
-        bears = exact_upper(evidence.labels, evidence.errors, promise.risk / evidence.models)
+        bears = float(exact_upper(evidence.labels, evidence.errors, promise.risk / evidence.models))
         told = f"{evidence.errors} errors in {evidence.labels} labels bear out a tolerance of {_up(bears)} at risk {promise.risk}"
         if bears <= promise.tolerance:
             yield Finding("fact", about, told)
@@ -103,7 +103,9 @@ def _design(terms: Terms) -> Iterator[Finding]:
     about = f"promise {terms.promise}"
     span = min((s.weights for s in terms.slices), key=len, default=())
     if span and len(first_cells(terms)) > 1000:
-        yield Finding("warning", about, f"{len(first_cells(terms))} declared slices: each gets a very small part of the risk")
+        yield Finding(
+            "warning", about, f"{len(first_cells(terms))} declared slices: each gets a very small part of the risk"
+        )
 
 
 def _source(settings: Settings, table: SourceTable, now: int) -> Iterator[Finding]:
@@ -138,7 +140,11 @@ def _promise(source: Source, table: SourceTable, watched: Watched, now: int) -> 
     if survey.first_time is not None:
         yield Finding("fact", about, f"first prediction found at {moment(survey.first_time).isoformat()}")
         if survey.first_time > terms.released + terms.bucket:
-            yield Finding("warning", about, f"released at {moment(terms.released).isoformat()}: what lay before the first row is missing")
+            yield Finding(
+                "warning",
+                about,
+                f"released at {moment(terms.released).isoformat()}: what lay before the first row is missing",
+            )
     yield from _volume(about, terms, tally, now)
 
 
@@ -163,7 +169,11 @@ def _values(about: str, survey: Survey, terms: Terms) -> Iterator[Finding]:
     predictions = ", ".join(repr(safe(value)) for value, _ in survey.predictions[:8])
     labels = ", ".join(repr(safe(value)) for value, _ in survey.labels[:8])
     if survey.disjoint:
-        yield Finding("problem", about, f"labels and predictions share no value. predictions: {predictions}; labels: {labels}. Map the right columns")
+        yield Finding(
+            "problem",
+            about,
+            f"labels and predictions share no value. predictions: {predictions}; labels: {labels}. Map the right columns",
+        )
     elif survey.pairs and 2 * survey.differing > survey.pairs:
         yield Finding(
             "warning",

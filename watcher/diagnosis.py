@@ -39,7 +39,9 @@ def _diagnosed(
 ) -> Standing:
     labels = sum(total(buckets[start]).labels for start in starts if start in buckets)
     found: dict[str, Any] = {
-        "labelled_share": _finite(float(labelled_share(labels, standing.predictions))) if standing.predictions else None,
+        "labelled_share": _finite(float(labelled_share(labels, standing.predictions)))
+        if standing.predictions
+        else None,
         "unlabelled": standing.predictions - labels,
         "label_age_seconds": None if standing.newest_label is None else now - int(standing.newest_label.timestamp()),
     }

@@ -48,14 +48,20 @@ def guess(survey: Survey) -> Guess:
         found = _named(names, [c for c in survey.columns if c not in columns.values()])
         if found is not None and not (part == "error" and "label" in columns):
             columns[part] = found
-    samples = {name: [row[i] for row in survey.rows if row[i] not in (None, "")] for i, name in enumerate(survey.columns)}
+    samples = {
+        name: [row[i] for row in survey.rows if row[i] not in (None, "")] for i, name in enumerate(survey.columns)
+    }
     if "time" not in columns:
         timely = [c for c in survey.columns if c not in columns.values() and _times(samples[c]) is not None]
         if timely:
             columns["time"] = timely[0]
     times = samples.get(columns.get("time", ""), [])
     time_format, zone = _times(times) or ("rfc3339", None)
-    missing = [part for part in ("time", "prediction") if part not in columns and not (part == "prediction" and "error" in columns)]
+    missing = [
+        part
+        for part in ("time", "prediction")
+        if part not in columns and not (part == "prediction" and "error" in columns)
+    ]
     if "label" not in columns and "error" not in columns:
         missing.append("label")
     notes = [f"column {name!r} is taken as {part}" for part, name in columns.items()]
@@ -138,7 +144,9 @@ def configuration(
     if found.time_format != "rfc3339":
         lines.append(f"time_format = {_quote(found.time_format)}")
     if found.time_zone:
-        lines.append(f"time_zone = {_quote(found.time_zone)}  {MARK}: the times carry no offset; which zone are they in?")
+        lines.append(
+            f"time_zone = {_quote(found.time_zone)}  {MARK}: the times carry no offset; which zone are they in?"
+        )
     lines += ["", "[source.columns]"]
     lines += [f"{part} = {_quote(name)}" for part, name in found.columns.items()]
     lines += [f"# {part} =   {MARK}: no column looks like it" for part in found.missing]
@@ -154,7 +162,9 @@ def configuration(
     ]
     if found.slices:
         inner = ", ".join(f"{_key(c)} = [{', '.join(map(_quote, values))}]" for c, values in found.slices.items())
-        lines.append(f"slices = {{ {inner} }}   {MARK}: each slice takes a part of the risk; delete what nobody asks about")
+        lines.append(
+            f"slices = {{ {inner} }}   {MARK}: each slice takes a part of the risk; delete what nobody asks about"
+        )
     lines += [
         f"# release_evidence = {{ labels = 0, errors = 0 }}   {MARK}: the hold-out sample that the tolerance rests on",
         f"uncertified = true   {MARK}: delete this line once release_evidence is there",

@@ -11,12 +11,12 @@ from dataclasses import dataclass, field, replace
 from datetime import datetime
 from typing import Any, Final
 
-from watcher.bounds import METHOD
 from watcher.book import Table, build, discovered, first_cells, next_sealing, sealing, table
+from watcher.bounds import METHOD
 from watcher.diagnosis import diagnose
 from watcher.errors import SourceFailed, TermsChanged, UsageError, WatcherError
-from watcher.ledger.terms import canonical_terms, terms_digest
 from watcher.ledger.store import Ledger
+from watcher.ledger.terms import canonical_terms, terms_digest
 from watcher.path import NOTHING, total
 from watcher.records import (
     Cell,
@@ -115,9 +115,9 @@ class _Known:
     """A promise version as the ledger has it before this look."""
 
     watched: Watched
-    unlisted: bool
     stored: StoredTerm | None
     cells: tuple[Cell, ...]
+    unlisted: bool = False
     supersedes: StoredTerm | None = None
 
     @property
@@ -159,7 +159,8 @@ def look(
     expected, _ = ledger.newest_look(source.name)
     known = recognise(ledger, source.name, watched)
     questions = [
-        question(each.watched.terms, each.sealed_until, now, at_given=at_given, slice_limit=slice_limit) for each in known
+        question(each.watched.terms, each.sealed_until, now, at_given=at_given, slice_limit=slice_limit)
+        for each in known
     ]
     tallies = source.tally(questions) if questions else []
     results = []
@@ -197,7 +198,9 @@ def idle(ledger: Ledger, source: Source, state: SourceState, watched: Sequence[W
         standing = wholes.get((each.watched.terms.promise, each.watched.terms.version))
         if standing is None or next_sealing(each.watched.terms, each.sealed_until) <= now:
             return False
-        newest = each.watched.terms.released if standing.newest_label is None else int(standing.newest_label.timestamp())
+        newest = (
+            each.watched.terms.released if standing.newest_label is None else int(standing.newest_label.timestamp())
+        )
         if (now - newest > each.watched.stale_after) != ("stale" in standing.flags):
             return False
         if ("unlisted" in standing.flags, "uncertified" in standing.flags) != (each.unlisted, each.watched.uncertified):
@@ -217,19 +220,23 @@ def recognise(ledger: Ledger, source: str, watched: Sequence[Watched]) -> list[_
             refuse_changes(found.terms, each.terms)
             taken.add(name)
             if found.closed_by is None and not each.retired:
-                known.append(_Known(each, False, found, tuple(ledger.cells(found.id))))
+                known.append(_Known(each, found, tuple(ledger.cells(found.id))))
             continue
         if each.retired:
             continue
         older = [t for t in stored.values() if t.terms.promise == each.terms.promise and t.closed_by is None]
-        older = [t for t in older if (t.terms.promise, t.terms.version) not in {(w.terms.promise, w.terms.version) for w in watched}]
-        known.append(_Known(each, False, None, first_cells(each.terms), older[0] if older else None))
+        older = [
+            t
+            for t in older
+            if (t.terms.promise, t.terms.version) not in {(w.terms.promise, w.terms.version) for w in watched}
+        ]
+        known.append(_Known(each, None, first_cells(each.terms), supersedes=older[0] if older else None))
     replaced = {known_one.supersedes.id for known_one in known if known_one.supersedes}
     for name, term in stored.items():
         if name in taken or term.closed_by is not None or term.terms.source != source or term.id in replaced:
             continue
         kept = Watched(term.terms, max(7 * 86400, 2 * term.terms.label_lag))
-        known.append(_Known(kept, True, term, tuple(ledger.cells(term.id))))
+        known.append(_Known(kept, term, tuple(ledger.cells(term.id)), unlisted=True))
     return known
 
 
@@ -327,7 +334,9 @@ def _judge(ledger: Ledger, source: Source, known: _Known, asked: Question, tally
         memories=verdict.memories,
     )
     rejected = {reason: count for reason, count in tally.rejected.items() if count}
-    changed = bool(counts or gone or sealed or events or new_cells or known.stored is None) or _flags(verdict) != _flags(previous)
+    changed = bool(counts or gone or sealed or events or new_cells or known.stored is None) or _flags(
+        verdict
+    ) != _flags(previous)
     samples = _samples(source, asked, rejected, known_rejects)
     return _Result(draft, tuple(events), changed, rejected, samples)
 
@@ -499,7 +508,7 @@ def _gravity(event: Event) -> int:
     return GRAVEST.index(event.kind) if event.kind in GRAVEST else len(GRAVEST)
 
 
-def _remarks(known: Sequence[_Known], at_given: bool) -> Iterable[str]:  # noqa: FBT001 - private, named at its one call
+def _remarks(known: Sequence[_Known], at_given: bool) -> Iterable[str]:
     for each in known:
         if at_given and each.watched.terms.columns.labelled_at is None:
             yield (

@@ -227,7 +227,8 @@ class CellCounts:
 @dataclass(frozen=True, slots=True)
 class Tally:
     """The answer to one question. Every row of the source is in exactly one of
-    predictions (of the whole), duplicates, outside, rejected, blank."""
+    predictions (of the whole), duplicates, outside, rejected, blank.
+    """
 
     promise: str
     version: str
@@ -328,7 +329,8 @@ class ToDecide:
 @dataclass(frozen=True, slots=True)
 class Standing:
     """Where a promise or one of its slices stands after a look: the JSON of the look, the verdict row of the ledger,
-    the input of page, report and metrics."""
+    the input of page, report and metrics.
+    """
 
     promise: str
     version: str

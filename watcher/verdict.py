@@ -165,7 +165,7 @@ def _tails(buckets: npt.NDArray[np.int64], at: int) -> npt.NDArray[np.int64]:
 
 
 def _recorded(memory: Memory) -> float:
-    return int(memory.get("total", 0)) / 1e6
+    return int(memory.get("total_micronats", 0)) / 1e6
 
 
 def _warning_of(memory: Memory) -> Warned:
@@ -208,8 +208,10 @@ def _limits(book: Book, judged: Sequence[_Judged]) -> list[tuple[Interval, Recen
     for j in (0, index):
         statistics = np.array([p.statistics[j:].sum(axis=0) for p in paths])
         lower, upper = windows.window_limits(statistics, np.full(len(paths), j), risk, restarts, design=design)
-        found.append([true_limits(a, b, terms.label_noise) for a, b in zip(lower.tolist(), upper.tolist(), strict=True)])
-    result = []
+        found.append(
+            [true_limits(a, b, terms.label_noise) for a, b in zip(lower.tolist(), upper.tolist(), strict=True)]
+        )
+    result: list[tuple[Interval, Recent | None]] = []
     for each, life, (low, high) in zip(paths, *found, strict=True):
         counts = CellPath(each.statistics[index:], each.counts[index:]).sum
         labels, errors = entered(terms, counts)
@@ -227,7 +229,7 @@ def _stand(
     newest = add(counts, open_counts).newest
     stale = now - (terms.released if newest is None else newest) > remarks.stale_after
     breach, events = _breach(book, judged, now, number)
-    support, trail = _support(book, judged, breach, stale, now)
+    support, trail = _support(book, judged, breach, stale)
     events += trail
     events += [_event(book, cell, kind, t, {}) for t, kind in judged.warned]
     if cell.column == "" and stale != bool(memory.get("stale", False)):
@@ -315,9 +317,7 @@ def _breach(book: Book, judged: _Judged, now: int, number: int) -> tuple[Breach 
     return breach, [_event(book, judged.cell, "breach", at, facts)]
 
 
-def _support(
-    book: Book, judged: _Judged, breach: Breach | None, stale: bool, now: int
-) -> tuple[Support | None, list[Event]]:
+def _support(book: Book, judged: _Judged, breach: Breach | None, stale: bool) -> tuple[Support | None, list[Event]]:
     """The support that stands now, and every change of it in bucket order."""
     events, memory = [], book.memories.get(judged.cell.key, {})
     was = bool(memory.get("supported", False))
@@ -349,14 +349,22 @@ def _window_facts(book: Book, window: int) -> dict[str, Any]:
 def _shown_support(book: Book, judged: _Judged, window: int) -> Support:
     terms, statistics = book.terms, book.paths[judged.cell.key].statistics[window:].sum(axis=0)
     restarts = windows.restarts(terms.service_life, terms.bucket)
-    _, upper = windows.window_limits(statistics, np.array(window), np.array(judged.risk), restarts, design=design_of(terms))
+    _, upper = windows.window_limits(
+        statistics, np.array(window), np.array(judged.risk), restarts, design=design_of(terms)
+    )
     shown = true_limits(0.0, float(upper), terms.label_noise)[1]
     return Support(moment(book.starts[window]), moment(book.end), min(shown, terms.tolerance))
 
 
 def _to_decide(terms: Terms, judged: _Judged, path: CellPath) -> ToDecide | None:
     """Only where one label is one trial of section 1; other designs have no such figure."""
-    if terms.measure == "loss" or terms.weight_levels or terms.n_max or terms.labelling_probabilities or terms.label_noise:
+    if (
+        terms.measure == "loss"
+        or terms.weight_levels
+        or terms.n_max
+        or terms.labelling_probabilities
+        or terms.label_noise
+    ):
         return None
     n, k = path.statistics.sum(axis=0).tolist()
     return ToDecide(*labels_to_decide(n, k, terms.tolerance, judged.risk))
@@ -374,7 +382,7 @@ def _remember(judged: _Judged, breach: Breach | None, support: Support | None, s
         }
     warning = judged.warning
     return {
-        "total": math.floor(judged.total * 1e6 + 0.5),
+        "total_micronats": math.floor(judged.total * 1e6 + 0.5),
         "breach": known,
         "supported": support is not None,
         "support": int(judged.supports[-1]),

@@ -18,10 +18,12 @@ from watcher.cli import show
 @click.command()
 @click.option("--labels", type=click.IntRange(0), required=True, metavar="N", help="Labels counted.")
 @click.option("--errors", type=click.IntRange(0), required=True, metavar="K", help="Errors among them.")
-@click.option("--risk", type=float, default=0.05, show_default=True, metavar="R", help="Chance that the interval is wrong.")
+@click.option(
+    "--risk", type=float, default=0.05, show_default=True, metavar="R", help="Chance that the interval is wrong."
+)
 @click.option("--tolerance", type=float, metavar="E", help="Also: the evidence for and against this error rate.")
 @click.option("--json", "as_json", is_flag=True, help="Print JSON.")
-def bounds(labels: int, errors: int, risk: float, tolerance: float | None, as_json: bool) -> None:  # noqa: FBT001 - click's
+def bounds(labels: int, errors: int, risk: float, tolerance: float | None, as_json: bool) -> None:
     """The interval that holds at all times at once, and the exact one for a single look planned beforehand."""
     try:
         always, once = watcher.confidence_bounds(labels, errors, risk), watcher.exact_bounds(labels, errors, risk)

@@ -20,7 +20,7 @@ SIGNS = {"problem": ("problem", "bold"), "warning": ("warning", ""), "fact": (" 
 @CONFIG
 @JSON
 @click.pass_context
-def check(ctx: click.Context, config: Path, as_json: bool) -> None:  # noqa: FBT001 - click's
+def check(ctx: click.Context, config: Path, as_json: bool) -> None:
     """Validate a configuration, reach its sources, ledger and secrets, and count usable rows; writes nothing."""
     findings = examine(settings.read(config), int(clock().timestamp()))
     problems = [finding for finding in findings if finding.level == "problem"]

@@ -15,7 +15,7 @@ CONFIG = click.argument("config", type=click.Path(path_type=Path))
 JSON = click.option("--json", "as_json", is_flag=True, help="Print JSON.")
 
 
-class Moment(click.ParamType):
+class Moment(click.ParamType[datetime]):
     """A time with its offset, such as 2026-11-29T06:00:00Z, or a day, which means its beginning in UTC."""
 
     name = "time"

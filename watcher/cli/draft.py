@@ -24,7 +24,9 @@ def draft(place: str, table: str | None) -> None:
         if table is None:
             raise click.UsageError("a URL needs --table, the table that holds the samples")
         source = open_source(SourceSpec(name="labels", kind="database", url=place, table=table))
-        click.echo(configuration(guess(source.survey()), kind="database", place={**_url(place), "table": table}), nl=False)
+        click.echo(
+            configuration(guess(source.survey()), kind="database", place={**_url(place), "table": table}), nl=False
+        )
         return
     from watcher.cli.look import draft_file
 

@@ -25,7 +25,9 @@ from watcher.look import ClockWentBack, Outcome, attempt
 @click.argument("target", type=click.Path(path_type=Path), metavar="CONFIG|FILE")
 @click.option("--at", type=Moment(), metavar="T", help="Look as of this time; later rows and labels are not seen.")
 @click.option("--dry-run", is_flag=True, help="Judge without writing to the ledger.")
-@click.option("--tolerance", type=float, metavar="E", help="With a data FILE: the promised error rate; nothing is kept.")
+@click.option(
+    "--tolerance", type=float, metavar="E", help="With a data FILE: the promised error rate; nothing is kept."
+)
 @click.option("--risk", type=float, metavar="R", help="With a data FILE: the accepted chance of a false alarm (0.01).")
 @JSON
 @click.pass_context
@@ -33,10 +35,10 @@ def look(
     ctx: click.Context,
     target: Path,
     at: datetime | None,
-    dry_run: bool,  # noqa: FBT001 - click's
+    dry_run: bool,
     tolerance: float | None,
     risk: float | None,
-    as_json: bool,  # noqa: FBT001 - click's
+    as_json: bool,
 ) -> None:
     """Pull the labelled samples, judge, record, and say where every promise stands.
 
@@ -94,10 +96,14 @@ def _drafted(
     path: Path, at: datetime | None, tolerance: float | None, risk: float | None, *, quiet: bool
 ) -> tuple[list[Outcome], Ledger, dict[tuple[str, str], str]]:
     if tolerance is None:
-        raise click.UsageError(f"{path} is a data file: say what was promised, for instance --tolerance 0.05; or give a .toml")
+        raise click.UsageError(
+            f"{path} is a data file: say what was promised, for instance --tolerance 0.05; or give a .toml"
+        )
     found, text = draft_file(path, tolerance, risk)
     if found.missing:
-        raise UsageError(f"{path}: " + "; ".join(found.notes) + ". `watcher draft FILE` writes a configuration to complete")
+        raise UsageError(
+            f"{path}: " + "; ".join(found.notes) + ". `watcher draft FILE` writes a configuration to complete"
+        )
     config = settings.parse(text, path.resolve().parent, {}, "draft")
     if not quiet:
         for note in found.notes:
@@ -105,7 +111,11 @@ def _drafted(
     ledger, table = Ledger.memory(), config.source[0]
     now = int((at or clock()).timestamp())
     source, promises = assembly.source_of(config, table), assembly.watched(config, table.name)
-    return [attempt(ledger, source, promises, now, time.monotonic, at_given=at is not None)], ledger, assembly.units(config)
+    return (
+        [attempt(ledger, source, promises, now, time.monotonic, at_given=at is not None)],
+        ledger,
+        assembly.units(config),
+    )
 
 
 def draft_file(path: Path, tolerance: float | None = None, risk: float | None = None) -> tuple[Guess, str]:

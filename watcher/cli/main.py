@@ -39,15 +39,17 @@ class _Group(click.Group):
         assert isinstance(found, click.Command)
         return found
 
-    def resolve_command(self, ctx: click.Context, args: list[str]) -> tuple[str | None, click.Command | None, list[str]]:
+    def resolve_command(
+        self, ctx: click.Context, args: list[str]
+    ) -> tuple[str | None, click.Command | None, list[str]]:
         try:
             return super().resolve_command(ctx, args)
         except click.UsageError as error:
             import difflib
 
             close = difflib.get_close_matches(args[0], self.commands_at, 1, 0.5) if args else []
-            error.message += f" Did you mean {close[0]!r}?" if close else ""
-            raise
+            hint = f" Did you mean {close[0]!r}?" if close else ""
+            raise click.UsageError(error.message + hint, ctx) from None
 
     def invoke(self, ctx: click.Context) -> Any:
         try:

@@ -19,7 +19,7 @@ from watcher.text import safe
 @CONFIG
 @click.argument("promise", required=False)
 @JSON
-def rejects(config: Path, promise: str | None, as_json: bool) -> None:  # noqa: FBT001 - click's
+def rejects(config: Path, promise: str | None, as_json: bool) -> None:
     """Show counts by reason and samples, at most 20 a reason, of the rows that the newest look could not use."""
     with assembly.open_ledger(settings.read(config), write=False) as ledger:
         names = [promise] if promise else sorted({term.terms.promise for term in ledger.terms()})
@@ -49,6 +49,8 @@ def rejects(config: Path, promise: str | None, as_json: bool) -> None:  # noqa: 
             table.add_column(Text(column))
         for row in rows:
             where = safe(row.file, 40) + (f":{row.line}" if row.line is not None else "")
-            values = ", ".join(f"{safe(k, 20)}={safe(v, 30) if v is not None else '(empty)'}" for k, v in row.values.items())
+            values = ", ".join(
+                f"{safe(k, 20)}={safe(v, 30) if v is not None else '(empty)'}" for k, v in row.values.items()
+            )
             table.add_row(*map(Text, (row.reason, where, safe(row.id or "", 30), values)))
         out.print(table)

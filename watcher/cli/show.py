@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
+from contextlib import contextmanager
 from datetime import UTC, datetime
 
 from rich import box
 from rich.console import Console, Group, RenderableType
 from rich.padding import Padding
+from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn
 from rich.table import Table
 from rich.text import Text
 
@@ -82,7 +84,9 @@ def numbers(standings: Sequence[Standing]) -> Table:
 
 
 def _row(standing: Standing) -> tuple[str, ...]:
-    name = "whole" if standing.column == "" else f"{safe(standing.column, 20)} = {safe(standing.value, 24) or '(empty)'}"
+    name = (
+        "whole" if standing.column == "" else f"{safe(standing.column, 20)} = {safe(standing.value, 24) or '(empty)'}"
+    )
     recent = standing.recent
     return (
         name,
@@ -106,13 +110,17 @@ def rejected(source: str, counts: Mapping[str, Mapping[str, int]]) -> Renderable
     ]
     if not lines:
         return None
-    return Text(f"Rows of {safe(source)} that could not be used — " + "; ".join(lines) + ". `watcher rejects` shows some.")
+    return Text(
+        f"Rows of {safe(source)} that could not be used — " + "; ".join(lines) + ". `watcher rejects` shows some."
+    )
 
 
 def failures(failed: Iterable[Failure]) -> list[RenderableType]:
     """Sources that gave no answer."""
     return [
-        Text(f"Source {safe(f.source)} gave no answer: {f.reason}: {safe(f.detail, 300)}. The counts stay as they were.")
+        Text(
+            f"Source {safe(f.source)} gave no answer: {f.reason}: {safe(f.detail, 300)}. The counts stay as they were."
+        )
         for f in failed
     ]
 
@@ -121,7 +129,9 @@ def events(happened: Sequence[Event]) -> RenderableType | None:
     """What happened in this look, in the words of wording.py."""
     if not happened:
         return None
-    return Group(Text("In this look", style="bold"), *(Text("  " + wording.event_sentence(event)) for event in happened))
+    return Group(
+        Text("In this look", style="bold"), *(Text("  " + wording.event_sentence(event)) for event in happened)
+    )
 
 
 def foot(head: Head, *, written: bool) -> Text:
@@ -135,3 +145,21 @@ def foot(head: Head, *, written: bool) -> Text:
 def moment(epoch: int) -> datetime:
     """An aware datetime from epoch seconds."""
     return datetime.fromtimestamp(epoch, UTC)
+
+
+@contextmanager
+def progress(what: str, total: int | None = None) -> Iterator[Callable[[], None]]:
+    """A progress bar on a terminal, nothing when piped; yields what to call after each step."""
+    out = console(stderr=True)
+    if not out.is_terminal:
+        yield lambda: None
+        return
+    columns = (TextColumn("{task.description}"), BarColumn(), TextColumn("{task.completed:,}"), TimeElapsedColumn())
+    with Progress(*columns, console=out, transient=True) as bar:
+        task = bar.add_task(what, total=total)
+        yield lambda: bar.advance(task)
+
+
+def event(happened: Event) -> str:
+    """One event as a sentence."""
+    return wording.event_sentence(happened)
