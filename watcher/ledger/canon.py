@@ -78,6 +78,8 @@ def amount(x: float) -> int | str:
     if x == int(x):
         return int(x)
     r = nearest(x)
+    if r % NANO == 0:
+        return r // NANO
     sign = "-" if r < 0 else ""
     return f"{sign}{abs(r) // NANO}.{abs(r) % NANO:09d}"
 

@@ -17,9 +17,11 @@ from watcher.ledger.counts import CountTable, read_counts
 from watcher.ledger.engine import file_of, make_engine, parse_url, reading, writing
 from watcher.ledger.lease import Lease
 from watcher.ledger.lock import FileLock
+from watcher.ledger.reports import Reports
 from watcher.ledger.rows import HEAD, LEDGER, SCHEMA_NUMBER, head_text, read_cells, read_head
 from watcher.ledger.size import size_of
 from watcher.ledger.tables import META, METADATA, SCHEMA
+from watcher.ledger.tokens import Tokens
 from watcher.records import (
     Cell,
     CellCounts,
@@ -48,6 +50,8 @@ class Ledger:
         self._write = write
         self._depth = 0
         self.id = ledger_id
+        self.tokens = Tokens(self.reading, self.writing)
+        self.reports = Reports(self.reading, self.writing)
         self.at_point: Callable[[str], None] = _nowhere
         """Called at named points of a commit: begun, terms, buckets, verdicts, events, look, head, committed."""
 
@@ -136,7 +140,7 @@ class Ledger:
             return self._commit(entry, state)
 
     def _commit(self, entry: Entry, state: SourceState | None) -> Head:
-        with self._writing() as connection:
+        with self.writing() as connection:
             head = append.append(connection, self.id, entry, self.at_point)
             if state is not None:
                 source_states.save(connection, state)
@@ -145,49 +149,49 @@ class Ledger:
 
     def save_source_state(self, state: SourceState) -> None:
         """Record how a pull went when it added nothing to the chain."""
-        with self._writing() as connection:
+        with self.writing() as connection:
             source_states.save(connection, state)
 
     def forget_rejects(self, promise: str | None = None) -> int:
         """Delete the stored raw rows of a promise, or of all; how many these were."""
-        with self._writing() as connection:
+        with self.writing() as connection:
             return rejects.forget(connection, promise)
 
     # --- reading
 
     def head(self) -> Head:
         """The newest look and the digest up to it; look 0 before the first."""
-        with self._reading() as connection:
+        with self.reading() as connection:
             return read_head(connection)
 
     def size_bytes(self) -> int:
         """What the ledger takes on disk (in memory: in pages)."""
-        with self._reading() as connection:
+        with self.reading() as connection:
             return size_of(connection)
 
     def newest_look(self, source: str) -> tuple[int, int]:
         """(number, epoch) of the newest look of a source; (0, 0) before the first."""
-        with self._reading() as connection:
+        with self.reading() as connection:
             return append.newest_look(connection, source)
 
     def newest_at(self) -> int:
         """Epoch of the newest look of all; 0 before the first."""
-        with self._reading() as connection:
+        with self.reading() as connection:
             return read.newest_at(connection)
 
     def terms(self, *, source: str | None = None, open_only: bool = True) -> list[StoredTerm]:
         """The promise versions, oldest first."""
-        with self._reading() as connection:
+        with self.reading() as connection:
             return read.terms(connection, source=source, open_only=open_only)
 
     def cells(self, term_id: int) -> list[Cell]:
         """The whole first, then by column and value."""
-        with self._reading() as connection:
+        with self.reading() as connection:
             return [cell for _, cell in read_cells(connection, term_id)]
 
     def count_table(self, term_id: int, *, since: int | None = None) -> CountTable:
         """The bucket cache of a term as columns; buckets starting at or after `since` (epoch; None: all)."""
-        with self._reading() as connection:
+        with self.reading() as connection:
             return read_counts(connection, term_id, read_cells(connection, term_id), since)
 
     def counts(self, term_id: int, *, since: int | None = None) -> list[CellCounts]:
@@ -196,14 +200,14 @@ class Ledger:
 
     def memories(self, term_id: int) -> dict[tuple[str, str], Mapping[str, Any]]:
         """(column, value) -> what the newest look left for the next one."""
-        with self._reading() as connection:
+        with self.reading() as connection:
             return read.memories(connection, term_id)
 
     def standings(
         self, *, promise: str | None = None, version: str | None = None, open_only: bool = False
     ) -> list[Standing]:
         """The newest standing of every cell: promise by promise in the order of their first looks, the whole first."""
-        with self._reading() as connection:
+        with self.reading() as connection:
             wanted = [
                 term
                 for term in read.terms(connection, source=None, open_only=open_only)
@@ -224,7 +228,7 @@ class Ledger:
         limit: int = 400,
     ) -> list[tuple[date, int, Standing]]:
         """(UTC day, look, standing): the last of each day, newest first; the next page is `before` the last day of this."""
-        with self._reading() as connection:
+        with self.reading() as connection:
             return read.history(
                 connection, promise, version, (column, value), since=since, until=until, before=before, limit=limit
             )
@@ -238,68 +242,68 @@ class Ledger:
         before: tuple[int, int] | None = None,
     ) -> list[StoredEvent]:
         """Events, newest first; the next page is `before` the (look, n) of the last one of this."""
-        with self._reading() as connection:
+        with self.reading() as connection:
             return read.events(connection, promise=promise, kinds=kinds, before=before, limit=limit)
 
     def source_state(self, source: str) -> SourceState:
         """How the pulls of a source went; a fresh state when it was never tried."""
-        with self._reading() as connection:
+        with self.reading() as connection:
             return source_states.read(connection, source)
 
     def source_states(self) -> list[SourceState]:
         """Of every source that was ever tried, by name."""
-        with self._reading() as connection:
+        with self.reading() as connection:
             return source_states.read_all(connection)
 
     def rejects(self, promise: str) -> tuple[dict[str, int], list[RejectedRow]]:
         """(reason -> rows the newest look saw, samples). Samples are outside text."""
-        with self._reading() as connection:
+        with self.reading() as connection:
             return rejects.read(connection, promise)
 
     # --- the outbox
 
     def waiting(self, route: str, now: datetime, *, limit: int = 1000) -> list[Notice]:
         """Notices of a route that are due, oldest look first."""
-        with self._reading() as connection:
+        with self.reading() as connection:
             return outbox.waiting(connection, route, now, limit)
 
     def undelivered(self, route: str, *, limit: int = 1000) -> list[Notice]:
         """All waiting notices of a route, due or not, oldest look first."""
-        with self._reading() as connection:
+        with self.reading() as connection:
             return outbox.undelivered(connection, route, limit)
 
     def notices(
         self, *, route: str | None = None, state: str | None = None, promise: str | None = None, limit: int = 100
     ) -> list[Notice]:
         """Notices, newest first."""
-        with self._reading() as connection:
+        with self.reading() as connection:
             return outbox.listed(connection, route=route, state=state, promise=promise, limit=limit)
 
     def notice(self, route: str, key: str) -> Notice | None:
         """One notice; None when there is none."""
-        with self._reading() as connection:
+        with self.reading() as connection:
             return outbox.find(connection, route, key)
 
     def notice_counts(self) -> dict[tuple[str, str], int]:
         """(route, state) -> notices."""
-        with self._reading() as connection:
+        with self.reading() as connection:
             return outbox.tally(connection)
 
     def record_answer(
         self, route: str, key: str, *, state: str, answer: str | None, next_at: datetime | None, tries: int
     ) -> None:
         """Write down what came of a try; `next_at` None leaves it. Raises UsageError for an unknown notice."""
-        with self._writing() as connection:
+        with self.writing() as connection:
             outbox.record(connection, route, key, state=state, answer=answer, next_at=next_at, tries=tries)
 
     def add_notices(self, notices: Iterable[Notice]) -> int:
         """Write heartbeats, reminders, reports (keys.period_key); one whose route and key is known is left out."""
-        with self._writing() as connection:
+        with self.writing() as connection:
             return outbox.add(connection, notices)
 
     def cancel_breach(self, promise: str, version: str, breach_number: int) -> int:
         """Cancel the waiting notices of a withdrawn breach; how many these were."""
-        with self._writing() as connection:
+        with self.writing() as connection:
             return outbox.cancel_breach(connection, promise, version, breach_number)
 
     # --- inside
@@ -310,14 +314,13 @@ class Ledger:
 
     @contextmanager
     def reading(self) -> Iterator[Connection]:
-        """A snapshot for this room's own audit and upgrade: other rooms use the methods above."""
+        """A snapshot for this room's own files: other rooms use the methods above."""
         with reading(self._engine) as connection:
             yield connection
 
-    _reading = reading
-
     @contextmanager
-    def _writing(self) -> Iterator[Connection]:
+    def writing(self) -> Iterator[Connection]:
+        """One transaction behind the head row, for this room's own files."""
         self._must_write()
         with writing(self._engine) as connection:
             # Everything that writes queues behind the head row, so no two writers see the same state.
