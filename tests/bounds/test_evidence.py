@@ -157,7 +157,14 @@ def test_counting_the_right_ones_mirrors_the_sides():
 
 @pytest.mark.parametrize(
     ("n", "k", "rate"),
-    [(10**9, 3 * 10**7, 0.03), (10**9, 0, 1e-6), (10**9, 10**9, 1e-6), (1, 1, 1e-6), (10**9, 1000, 1e-6), (5, 0, 0.999999)],
+    [
+        (10**9, 3 * 10**7, 0.03),
+        (10**9, 0, 1e-6),
+        (10**9, 10**9, 1e-6),
+        (1, 1, 1e-6),
+        (10**9, 1000, 1e-6),
+        (5, 0, 0.999999),
+    ],
 )
 def test_extremes_stay_finite(n, k, rate):
     """Up to 1e9 labels and down to a tolerance of 1e-6 the evidence is a finite number close to the formula."""

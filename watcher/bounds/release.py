@@ -13,7 +13,7 @@ from typing import Final
 
 import numpy as np
 from numpy.typing import ArrayLike
-from scipy.special import bdtr
+from scipy.special import betaincc
 
 from watcher.bounds.arguments import fraction, fractions
 from watcher.bounds.evidence import lower_limit, upper_limit
@@ -253,13 +253,13 @@ def labels_for_errors(
     if not (k >= 0).all():
         raise ValueError("errors: counts from 0 on are allowed")
     low, high = k.astype(np.int64), (k + 1.0).astype(np.int64)
-    growing = bdtr(k, high, rate) > chance
+    growing = _at_most(k, high, rate) > chance
     while growing.any():
         low, high = np.where(growing, high, low), np.where(growing, 2 * high, high)
-        growing = bdtr(k, high, rate) > chance
+        growing = _at_most(k, high, rate) > chance
     while (high - low > 1).any():
         middle = (low + high) // 2
-        enough = bdtr(k, np.maximum(middle, k), rate) <= chance
+        enough = (middle > low) & (_at_most(k, np.maximum(middle, k + 1), rate) <= chance)
         low, high = np.where(enough, low, middle), np.where(enough, middle, high)
     return np.asarray(high)
 
@@ -273,18 +273,32 @@ def labels_needed(tolerance: float, risk: float, power: float, rate: float) -> L
         fraction(name, value)
     if not 0.0 <= rate < tolerance:
         raise ValueError(f"rate = {rate!r}: a number from 0 to below tolerance = {tolerance!r} is allowed")
-    first, block = 0, 64
-    while True:
-        allowed = np.arange(first, first + block)
-        labels = labels_for_errors(tolerance, risk, allowed)
-        chances = bdtr(allowed.astype(np.float64), labels, rate)
-        good = np.flatnonzero(chances >= power)
-        if good.size:
-            i = int(good[0])
-            return LabelsNeeded(int(labels[i]), int(allowed[i]), float(chances[i]))
-        if labels[-1] > _MOST_LABELS:
+    low, high = -1, 1
+    while _power(high, tolerance, risk, rate)[1] < power:
+        low, high = high, 2 * high
+        if _power(high, tolerance, risk, rate)[0] > _MOST_LABELS:
             raise ValueError(f"rate = {rate!r}: over {_MOST_LABELS} labels; promise a tolerance further above the rate")
-        first, block = first + block, 2 * block
+    while high - low > 1:
+        middle = (low + high) // 2
+        low, high = (low, middle) if _power(middle, tolerance, risk, rate)[1] >= power else (middle, high)
+    # The power wavers a little from one count to the next: a somewhat smaller sample may do as well.
+    allowed = np.arange(max(0, high - 64 - high // 50), high + 1)
+    labels = labels_for_errors(tolerance, risk, allowed)
+    chances = _at_most(allowed, labels, rate)
+    i = int(np.argmax(chances >= power))
+    return LabelsNeeded(int(labels[i]), int(allowed[i]), float(chances[i]))
+
+
+def _power(allowed: int, tolerance: float, risk: float, rate: float) -> tuple[int, float]:
+    """The smallest sample that certifies with so many errors, and its chance to have no more of them."""
+    labels = int(labels_for_errors(tolerance, risk, allowed))
+    return labels, float(_at_most(allowed, labels, rate))
+
+
+def _at_most(errors: ArrayLike, labels: ArrayLike, rate: ArrayLike) -> Floats:
+    """P(Bin(labels, rate) <= errors), errors < labels."""
+    k = np.asarray(errors, dtype=np.float64)
+    return np.asarray(betaincc(k + 1.0, np.asarray(labels) - k, rate))
 
 
 def _class_bound(labels: int, errors: int, risk: float, deviation: float, form: str) -> ClassBound:
