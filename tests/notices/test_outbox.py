@@ -129,10 +129,10 @@ def test_a_thousand_notices_of_26_hours_arrive_within_15_minutes_in_order_each_k
         look, promise = 1 + number * 700 // 1000, f"p{number * 7 % 40:02}"
         at = T0 + timedelta(hours=25) * (look / 700)
         made.setdefault(promise, []).append(memory.happen(some_event(promise=promise), look, number, at, "desk")[0])
-    _run(memory, peer, clock, timedelta(hours=26), timedelta(minutes=1))
+    _run(memory, peer, clock, timedelta(hours=26), timedelta(minutes=10))
     tried_while_down = len(peer.tried)
     peer.answer = lambda _: OK
-    _run(memory, peer, clock, timedelta(minutes=15))
+    _run(memory, peer, clock, timedelta(minutes=15), timedelta(seconds=30))
     arrived: dict[str, list[str]] = {}
     for message in peer.taken:
         for item in message.items:
@@ -143,7 +143,7 @@ def test_a_thousand_notices_of_26_hours_arrive_within_15_minutes_in_order_each_k
     assert len(peer.keys) == 1000
     assert set(memory.states()) == {"delivered"}
     # One try a pass while nobody answers, not one for each waiting message.
-    assert tried_while_down <= 26 * 60
+    assert tried_while_down <= 26 * 6
 
 
 class Killed(BaseException):

@@ -56,6 +56,8 @@ class Booked:
     message_key: Callable[[str, str, int], str]
     _known: dict[tuple[str, str], StoredTerm] = field(default_factory=dict, init=False, repr=False)
     """Terms are frozen, so what was read once stays true."""
+    _stand: dict[tuple[int, str, str], Sequence[Standing]] = field(default_factory=dict, init=False, repr=False)
+    """Standings change with a look only; a receiver that comes back gets many messages between two looks."""
 
     @property
     def ledger_id(self) -> str:
@@ -109,11 +111,19 @@ class Booked:
 
     def standings(self, promise: str, version: str) -> Sequence[Standing]:
         """Where the promise and its slices stand now, the whole first."""
-        return self.store.standings(promise=promise, version=version)
+        place = (self.store.head().look, promise, version)
+        if place not in self._stand:
+            self._forget(place[0])
+            self._stand[place] = self.store.standings(promise=promise, version=version)
+        return self._stand[place]
 
     def counts(self, promise: str, version: str) -> Sequence[CellCounts]:
         """Every count of the promise."""
         return self.store.counts(self._term(promise, version).id)
+
+    def _forget(self, look: int) -> None:
+        for place in [place for place in self._stand if place[0] != look]:
+            del self._stand[place]
 
     def _term(self, promise: str, version: str) -> StoredTerm:
         if (promise, version) not in self._known:
