@@ -77,6 +77,7 @@ class Reports:
         columns = [column for column in REPORT.c if column is not REPORT.c.content]
         with self._reading() as connection:
             found = [_stored(row) for row in connection.execute(select(*columns))]
+        # The outer sort is stable, also in reverse: names stay in order.
         return sorted(sorted(found, key=lambda r: r.name), key=lambda r: (r.week, r.revision), reverse=True)
 
     def content(self, week: str, revision: int, name: str) -> bytes | None:
