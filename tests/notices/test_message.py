@@ -164,6 +164,17 @@ def test_a_bundle_that_would_be_too_large_leaves_out_its_oldest_lines_and_says_h
     assert kept[-1]["bucket"] == "2027-02-09T00:00:00Z"
 
 
+def test_the_standings_are_those_of_the_whole_and_of_the_slices_that_are_told_of() -> None:
+    """A promise with hundreds of slices does not make every message large."""
+    memory = Memory()
+    memory.happen(breach_event(column="depot", value="Birch"), 7, 0, T0, "desk")
+    others = [some_standing(column="depot", value=value) for value in ("Alder", "Birch", "Cedar")]
+    memory.known_standings["damage-photos", "1"] = [some_standing(), *others]
+    slices = [standing["slice"] for standing in _write(memory).standings]
+
+    assert slices == [None, {"column": "depot", "value": "Birch"}]
+
+
 def test_hostile_slice_values_stay_text_everywhere() -> None:
     """No control character, no markup, no formula, in text, HTML, JSON and CSV."""
     memory = Memory()

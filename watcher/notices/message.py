@@ -47,7 +47,7 @@ class Writer:
             look=look,
             head=self.archive.head(),
             items=items,
-            standings=tuple(standing_json(s) for standings in known.values() for s in standings),
+            standings=tuple(standing_json(s) for standings in known.values() for s in standings if _named(s, items)),
             attachments=self._evidence(route, notices[0]),
         )
 
@@ -108,6 +108,12 @@ class Writer:
             archive.counts(promise, version),
             archive.head(),
         )
+
+
+def _named(standing: Standing, items: Sequence[Item]) -> bool:
+    """The whole, and the slices that the message tells of: a promise may have hundreds of others."""
+    own = {(item.promise, item.version, item.column, item.value) for item in items}
+    return not standing.column or (standing.promise, standing.version, standing.column, standing.value) in own
 
 
 def _type(route: RouteSpec, notice: Notice) -> str:
