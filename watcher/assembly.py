@@ -5,7 +5,9 @@ from __future__ import annotations
 from watcher.errors import SettingsError
 from watcher.ledger.store import Ledger
 from watcher.look import Routing, Watched
-from watcher.settings import Settings, SourceTable
+from watcher.notices.base import RouteSpec
+from watcher.notices.routes import Hidden, route_of
+from watcher.settings import RouteTable, Settings, SourceTable
 from watcher.sources import open_source
 from watcher.sources.base import Source, SourceSpec
 
@@ -72,3 +74,28 @@ def open_ledger(settings: Settings, *, write: bool) -> Ledger:
 def units(settings: Settings) -> dict[tuple[str, str], str]:
     """The noun of sentences by promise and version."""
     return {(promise.name, promise.version): promise.unit for promise in settings.promise}
+
+
+def route_specs(settings: Settings) -> list[RouteSpec]:
+    """The routes with their secrets resolved. Raises SettingsError naming the route and the key."""
+    found = []
+    for table in settings.route:
+        try:
+            found.append(route_of(table, _hidden(settings, table), settings.folder))
+        except ValueError as error:
+            raise SettingsError([str(error)]) from None
+    return found
+
+
+def _hidden(settings: Settings, table: RouteTable) -> Hidden:
+    names = (table.secret_env,) if isinstance(table.secret_env, str) else table.secret_env or ()
+    secrets = [settings.hidden(name, None, "secret") for name in names]
+    if table.secret_file is not None:
+        secrets += settings.hidden(None, table.secret_file, "secret").split()
+    with_password = table.password_env is not None or table.password_file is not None
+    return Hidden(
+        url=settings.secret(table) if table.kind == "webhook" else None,
+        secrets=tuple(secrets),
+        password=settings.hidden(table.password_env, table.password_file, "password") if with_password else None,
+        environment=settings.environment,
+    )

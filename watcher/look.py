@@ -185,27 +185,25 @@ def look(
     )
 
 
-def idle(ledger: Ledger, source: Source, state: SourceState, watched: Sequence[Watched], now: int) -> bool:
-    """True when a pull could bring nothing: the files are unchanged, no bucket is due and no promise grows stale."""
-    signature = source.signature()
-    if signature is None or signature != state.signature:
-        return False
-    known = recognise(ledger, source.name, watched)
-    if any(each.stored is None or each.watched.retired for each in known):
-        return False
-    wholes = {(s.promise, s.version): s for s in ledger.standings() if s.column == ""}
+def quiet_until(ledger: Ledger, source: str, watched: Sequence[Watched], has_future: bool) -> int:
+    """The time (epoch seconds) before which a look at unchanged files could find nothing new; 0: look anyway.
+
+    That is when the next bucket is due to be sealed or a promise grows stale, whichever is first.
+    """
+    known = recognise(ledger, source, watched)
+    if has_future or any(each.stored is None or each.watched.retired for each in known):
+        return 0
+    moments = []
     for each in known:
-        standing = wholes.get((each.watched.terms.promise, each.watched.terms.version))
-        if standing is None or next_sealing(each.watched.terms, each.sealed_until) <= now:
-            return False
-        newest = (
-            each.watched.terms.released if standing.newest_label is None else int(standing.newest_label.timestamp())
-        )
-        if (now - newest > each.watched.stale_after) != ("stale" in standing.flags):
-            return False
-        if ("unlisted" in standing.flags, "uncertified" in standing.flags) != (each.unlisted, each.watched.uncertified):
-            return False
-    return True
+        terms = each.watched.terms
+        whole = next((s for s in ledger.standings(promise=terms.promise, version=terms.version) if not s.column), None)
+        if whole is None:
+            return 0
+        moments.append(next_sealing(terms, each.sealed_until))
+        newest = terms.released if whole.newest_label is None else int(whole.newest_label.timestamp())
+        if "stale" not in whole.flags:
+            moments.append(newest + each.watched.stale_after + 1)
+    return min(moments, default=0)
 
 
 def recognise(ledger: Ledger, source: str, watched: Sequence[Watched]) -> list[_Known]:
@@ -623,3 +621,32 @@ def _failed(
         rejected={},
         failed=(Failure(source, failure.reason, failure.detail, after.failing_since),),
     )
+
+
+def acknowledge(ledger: Ledger, promise: str, version: str, number: int, who: str, why: str, now: int) -> Head:
+    """Record who knows of a breach and why it may stand; it stops the daily reminder and nothing else.
+
+    Raises UsageError when there is no such breach, or without a name and a reason.
+    """
+    if not who.strip() or not why.strip():
+        raise UsageError("an acknowledgement needs a name and a reason: who = ..., why = ...")
+    stored = [t for t in ledger.terms(open_only=False) if (t.terms.promise, t.terms.version) == (promise, version)]
+    if not stored:
+        raise UsageError(f"promise {promise!r} version {version!r}: the ledger knows no such promise")
+    cells = ledger.standings(promise=promise, version=version)
+    numbers = {standing.breach.number for standing in cells if standing.breach}
+    if number not in numbers:
+        known = ", ".join(map(str, sorted(numbers))) or "none"
+        raise UsageError(f"promise {promise!r} version {version!r}: breach {number} does not stand; standing: {known}")
+    source = stored[0].terms.source
+    facts = {"number": number, "who": who.strip()[:200], "why": why.strip()[:2000]}
+    entry = Entry(
+        source=source,
+        at=max(now, ledger.newest_at()),
+        kind="acknowledge",
+        method=METHOD,
+        expected=ledger.newest_look(source)[0],
+        terms=(),
+        events=(Event("acknowledged", promise, version, "", "", None, facts),),
+    )
+    return ledger.commit(entry)

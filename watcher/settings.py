@@ -168,6 +168,8 @@ class WebTable(_Table):
     hosts: tuple[str, ...] = ()
     """Further Host headers to answer to."""
     behind_proxy: bool = False
+    public_url: str | None = None
+    """Where people reach the page, for the links in notices; default: http:// and `listen`."""
     tls_certificate: str | None = None
     tls_key: str | None = None
 

@@ -20,16 +20,24 @@ from watcher.look import Outcome, attempt
 
 @click.command()
 @click.argument("folder", type=click.Path(path_type=Path), required=False)
-@click.option("--once", is_flag=True, help="Replay the whole scenario at full speed and print the verdict.")
+@click.option("--once", is_flag=True, help="No daemon: replay at full speed and print the verdict.")
 @click.option("--seed", type=click.IntRange(0), default=7, show_default=True, help="Of the invented data.")
 @JSON
 def demo(folder: Path | None, once: bool, seed: int, as_json: bool) -> None:
     """An invented parcel network whose damage-photo classifier breaks its promise in one depot.
 
-    Writes data and a commented configuration into FOLDER (default: a new watcher-demo). Exits 0 although it breaches.
+    Writes data and a commented configuration into FOLDER (default: a new watcher-demo) and plays about a simulated day
+    a second through the real daemon, with page and metrics, until Ctrl-C. Exits 0 although a promise breaks.
     """
     place = folder or _new_folder()
-    _once(place, seed, as_json=as_json)
+    if once:
+        _once(place, seed, as_json=as_json)
+        return
+    if as_json:
+        raise click.UsageError("--json goes with --once")
+    from watcher.cli.demo_live import play
+
+    play(place, seed)
 
 
 def _new_folder() -> Path:

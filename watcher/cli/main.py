@@ -19,6 +19,7 @@ class _Group(click.Group):
         "look": "watcher.cli.look:look",
         "draft": "watcher.cli.draft:draft",
         "check": "watcher.cli.check:check",
+        "run": "watcher.cli.run:run",
         "status": "watcher.cli.status:status",
         "explain": "watcher.cli.explain:explain",
         "bounds": "watcher.cli.bounds:bounds",
