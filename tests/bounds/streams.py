@@ -39,13 +39,18 @@ def _drawn(p, rng):
 KINDS = {"constant": constant, "step": step, "sine": sine, "adversary": adversary}
 
 
-def ever_wrong(p, x, bounds):
-    """The number of streams whose running mean of p lies outside `bounds(n, k)` after some label."""
+def ever_wrong(p, x, bounds, possible=None):
+    """The number of streams whose running mean of p lies outside `bounds(n, k)` after some label.
+
+    `possible(n, k, mean)`, where given, is False only where the mean cannot lie outside: those limits are not computed.
+    """
     n = np.broadcast_to(np.arange(1, p.shape[1] + 1), p.shape)
     k = np.cumsum(x, axis=1)
     mean = np.cumsum(p, axis=1) / n
+    stream, label = np.nonzero(np.ones(p.shape, dtype=bool) if possible is None else possible(n, k, mean))
+    n, k, mean = n[stream, label], k[stream, label], mean[stream, label]
     # The same (n, k) occurs in many streams: its limits are computed once.
     code, place = np.unique(n.astype(np.int64) * (p.shape[1] + 1) + k, return_inverse=True)
     found = bounds(code // (p.shape[1] + 1), code % (p.shape[1] + 1))
-    place = place.reshape(p.shape)
-    return int(((mean < found.lower[place]) | (mean > found.upper[place])).any(axis=1).sum())
+    outside = (mean < found.lower[place]) | (mean > found.upper[place])
+    return np.unique(stream[outside]).size

@@ -38,12 +38,12 @@ def by_hand(n, k, m, side, mixture):
 
 def test_mixtures_are_as_the_method_states():
     """LIFE has 64 geometric shifts weighted by their square root; RESTART adds 28 even ones with 0.8 of the weight."""
-    assert (64, 92) == (LIFE.shifts.size, RESTART.shifts.size)
-    assert [0.001, 3.0] == pytest.approx([LIFE.shifts[0], LIFE.shifts[-1]])
+    assert (LIFE.shifts.size, RESTART.shifts.size) == (64, 92)
+    assert pytest.approx([LIFE.shifts[0], LIFE.shifts[-1]]) == [0.001, 3.0]
     assert np.ptp(np.diff(np.log(LIFE.shifts))) < 1e-12
     assert np.ptp(LIFE.weights / np.sqrt(LIFE.shifts)) < 1e-12
-    assert [1.0, 1.0] == pytest.approx([LIFE.weights.sum(), RESTART.weights.sum()])
-    assert 0.8 == pytest.approx(RESTART.weights[64:].sum())
+    assert pytest.approx([LIFE.weights.sum(), RESTART.weights.sum()]) == [1.0, 1.0]
+    assert pytest.approx(RESTART.weights[64:].sum()) == 0.8
     assert np.linspace(0.25, 1.6, 28) == pytest.approx(RESTART.shifts[64:])
 
 
@@ -66,7 +66,7 @@ def test_mean_of_exponentiated_evidence_is_one():
         for side in SIDES:
             wealth = np.exp(evidence([(n, k) for k in range(n + 1)], float(p), side))
 
-            assert 1.0 == pytest.approx(math.fsum((wealth * chances).tolist()), rel=1e-12)
+            assert pytest.approx(math.fsum((wealth * chances).tolist()), rel=1e-12) == 1.0
 
 
 def test_mean_is_at_most_one_while_the_rate_drifts():
@@ -79,14 +79,14 @@ def test_mean_is_at_most_one_while_the_rate_drifts():
             chances = np.convolve(chances, [1 - rate, rate])
         means.append(float(chances @ np.exp(evidence([(40, k) for k in range(41)], 0.2, "above"))))
 
-    assert 1.0 == pytest.approx(means[0], rel=1e-12)
+    assert pytest.approx(means[0], rel=1e-12) == 1.0
     assert means[0] > means[1] > means[2]
 
 
 def test_a_window_without_labels_has_exactly_no_evidence():
     """n = 0 gives 0.0, not a rounding error."""
     for side in SIDES:
-        assert [0.0, 0.0] == evidence([[0, 0], [0, 0]], [0.03, 0.5], side).tolist()
+        assert evidence([[0, 0], [0, 0]], [0.03, 0.5], side).tolist() == [0.0, 0.0]
 
 
 @pytest.mark.parametrize("side", SIDES)

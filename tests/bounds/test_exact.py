@@ -8,6 +8,7 @@ from math import comb
 import numpy as np
 import pytest
 from bounds import published
+from scipy.special import betainc, betaincc, gammaincinv
 
 import watcher
 from watcher.bounds.exact import exact_upper
@@ -58,7 +59,7 @@ def test_poisson_reliability_factors():
 def test_binomial_tail_inversion():
     """Langford 2005: the test-set bound at risk 0.05."""
     for (n, k), upper in published.LANGFORD_2005.items():
-        assert upper == pytest.approx(float(exact_upper(n, k, 0.05)), abs=6e-8)
+        assert upper == pytest.approx(float(exact_upper(n, k, 0.05)), abs=1e-9)
 
 
 def test_limits_are_rounded_outward():
@@ -78,6 +79,20 @@ def test_edges():
     """No labels: [0, 1]; no errors: lower 0; all errors: upper 1; 1e9 labels and a risk of 1e-12 work."""
     found = watcher.exact_bounds([0, 7, 7, 10**9], [0, 0, 7, 10**3], [0.05, 0.05, 0.05, 1e-12])
 
-    assert [0.0, 0.0] == found.lower[:2].tolist()
-    assert [1.0, 1.0] == found.upper[[0, 2]].tolist()
-    assert 7e-7 < found.lower[3] < 1e-6 < found.upper[3] < 1.3e-6
+    assert found.lower[:2].tolist() == [0.0, 0.0]
+    assert found.upper[[0, 2]].tolist() == [1.0, 1.0]
+    # With 1e9 labels the counts are Poisson; 7.1 standard deviations of 3.2e-8 on each side.
+    assert (gammaincinv(1000, 5e-13) / 1e9, gammaincinv(1001, 1 - 5e-13) / 1e9) == pytest.approx(
+        (found.lower[3], found.upper[3]), rel=1e-4
+    )
+
+
+def test_the_library_s_inverse_is_checked():
+    """Where scipy's inverse is off the limit still has its tail: 1,000 errors in 1e9 labels, and sizes around it."""
+    for n in (10**7, 10**8, 10**9):
+        for k in (3, 100, 1000, 10**5, n // 2, n - 1000):
+            for risk in (1e-12, 0.05):
+                found = watcher.exact_bounds(n, k, risk)
+                tails = betainc(k, n - k + 1, found.lower), betaincc(k + 1, n - k, found.upper)
+                assert (np.array(tails) <= risk / 2).all()
+                assert (np.array(tails) > risk / 2 * (1 - 1e-5)).all()

@@ -49,9 +49,9 @@ def test_figures_of_the_method():
         limit = wald(0.03, 0.001, rise * 0.03)
         ratios.append(watcher.operating_characteristics(0.03, 0.001, rise * 0.03, 12_000).mean_labels / limit)
 
-    assert [1.26, 1.24, 1.24, 1.26] == pytest.approx(ratios, abs=0.006)
+    assert pytest.approx(ratios, abs=0.006) == [1.26, 1.24, 1.24, 1.26]
     false = watcher.operating_characteristics(0.03, 0.001, 0.03, 16_000).alarm_probability[-1]
-    assert 5.3e-4 == pytest.approx(false, abs=0.06e-4)
+    assert pytest.approx(false, abs=0.06e-4) == 5.3e-4
 
 
 def test_the_boundary_is_the_least_number_that_breaks():
@@ -102,7 +102,7 @@ def test_quantiles_and_horizon():
     assert found.median_labels == q
     assert found.alarm_probability[q] >= 0.5 > found.alarm_probability[q - 1]
     assert found.labels_quantile(0.99) is None
-    assert (1001,) == found.alarm_probability.shape
+    assert found.alarm_probability.shape == (1001,)
     assert found.alarm_probability[0] == 0.0
     assert watcher.operating_characteristics(0.03, 0.001, 0.06, 1).mean_labels == 1.0
 
@@ -113,5 +113,5 @@ def test_nonsense_is_refused():
     for name, value in [("tolerance", 0), ("risk", 1.0), ("rate", math.nan), ("horizon", 0), ("horizon", 2.5)]:
         with pytest.raises(ValueError, match=f"{name} = "):
             watcher.operating_characteristics(**(good | {name: value}))
-    with pytest.raises(ValueError, match="q = 1.0"):
+    with pytest.raises(ValueError, match=r"q = 1\.0"):
         watcher.operating_characteristics(**good).labels_quantile(1.0)

@@ -58,23 +58,23 @@ def test_shares_are_the_method_s():
     assert J == 363
     shares = BREACH.shares(J, J + 3)
 
-    assert [0.20, 0.75 / J, 0.75 / J] == pytest.approx([shares[0], shares[1], shares[J]])
-    assert [0.05 * J / (J * (J + 1)), 0.05 * J / ((J + 1) * (J + 2))] == pytest.approx([shares[J + 1], shares[J + 2]])
-    assert [0.50, 0.45 / J] == pytest.approx(SUPPORT.shares(J, 2))
+    assert pytest.approx([shares[0], shares[1], shares[J]]) == [0.20, 0.75 / J, 0.75 / J]
+    assert pytest.approx([shares[J + 1], shares[J + 2]]) == [0.05 * J / (J * (J + 1)), 0.05 * J / ((J + 1) * (J + 2))]
+    assert pytest.approx(SUPPORT.shares(J, 2)) == [0.50, 0.45 / J]
     for budget in (BREACH, SUPPORT):
         for count in (0, 1, 2, 100, J, J + 1, J + 2, 5000):
-            assert 1.0 == pytest.approx(budget.shares(J, count).sum() + budget.remainder(J, count), abs=1e-12)
+            assert pytest.approx(budget.shares(J, count).sum() + budget.remainder(J, count), abs=1e-12) == 1.0
 
 
 def test_number_of_restarts():
     """J = max(1, ceil(service_life/bucket) - 1)."""
-    assert [363, 1455, 1, 1, 2] == [
+    assert [
         restarts(364 * DAY, DAY),
         restarts(364 * DAY, DAY // 4),
         restarts(DAY, DAY),
         restarts(DAY + 1, DAY),
         restarts(2 * DAY + 1, DAY),
-    ]
+    ] == [363, 1455, 1, 1, 2]
 
 
 def test_total_is_the_sum_over_windows_rounded_down():
@@ -201,10 +201,10 @@ def test_nothing_counted_yet():
     none = np.zeros((0, 2), dtype=int)
 
     assert total(none, 0.03, J) == pytest.approx(0.0, abs=1e-6)
-    assert (0.0, 0) == (crossing(none, 0.03, THRESHOLD, J).lower, crossing(none, 0.03, THRESHOLD, J).likeliest)
-    assert -1 == support_of(none, 0.03, 0.001, J, long_enough=np.zeros(0, dtype=bool))
-    assert 0 == totals(none, 0.03, J).size
-    assert 0 == supports(none, 0.03, 0.001, J, long_enough=np.zeros((0, 0), dtype=bool)).size
+    assert (crossing(none, 0.03, THRESHOLD, J).lower, crossing(none, 0.03, THRESHOLD, J).likeliest) == (0.0, 0)
+    assert support_of(none, 0.03, 0.001, J, long_enough=np.zeros(0, dtype=bool)) == -1
+    assert totals(none, 0.03, J).size == 0
+    assert supports(none, 0.03, 0.001, J, long_enough=np.zeros((0, 0), dtype=bool)).size == 0
 
 
 @pytest.mark.parametrize(("seed", "volume"), [(1, 70), (2, 500), (3, 20), (4, 3000)])

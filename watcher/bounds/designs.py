@@ -85,7 +85,7 @@ def per_label_slope(labels: Rows, rate: Floats, side: Side, shifts: Floats) -> F
     return np.asarray(below.transpose(*range(1, below.ndim), 0))
 
 
-def entropy_ceiling(labels: Floats, errors: Floats, rate: float, side: Side) -> Floats:
+def entropy_ceiling(labels: Floats, errors: Floats, rate: float | Floats, side: Side) -> Floats:
     """n*KL(k/n, rate) on the right side of the rate, else 0, plus slack: no shift can give more evidence."""
     with np.errstate(divide="ignore", invalid="ignore"):
         right = labels - errors
@@ -120,7 +120,7 @@ class Uniform:
         """The counts themselves."""
         return statistics[..., 0].astype(np.float64), statistics[..., 1].astype(np.float64)
 
-    def ceiling(self, statistics: Rows, rate: float, side: Side) -> Floats:
+    def ceiling(self, statistics: Rows, rate: float | Floats, side: Side) -> Floats:
         """n*KL(k/n, rate)."""
         return entropy_ceiling(*self.equivalent(statistics, side), rate, side)
 
@@ -154,7 +154,7 @@ class Loss:
         used = 1 if side == "above" else 2
         return statistics[..., 0].astype(np.float64), statistics[..., used] / PPM
 
-    def ceiling(self, statistics: Rows, rate: float, side: Side) -> Floats:
+    def ceiling(self, statistics: Rows, rate: float | Floats, side: Side) -> Floats:
         """n*KL(mean loss, rate)."""
         labels, errors = self.equivalent(statistics, side)
         return entropy_ceiling(labels, np.minimum(errors, labels), rate, side)
