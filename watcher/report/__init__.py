@@ -1,0 +1,1 @@
+"""The weekly report and the charts that it shares with the page."""
