@@ -8,7 +8,7 @@ import hashlib
 import tempfile
 import time
 from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass, fields, replace
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any, Final, TypeVar
 
@@ -21,7 +21,7 @@ from watcher.sources.base import SourceSpec, Survey
 from watcher.sources.duck import Duck, csv_relation
 from watcher.sources.header import Header, positions, read_header
 from watcher.sources.lines import Lines, Malformed
-from watcher.sources.statement import Statement, Table
+from watcher.sources.statement import Statement, Table, parts_of
 from watcher.sources.surveying import SAMPLE, survey_of
 from watcher.sources.tallying import answer
 
@@ -89,7 +89,7 @@ class FileSource:
         """Return at most `limit` of the rows that were rejected for `reason`, by file and line."""
 
         def pull(files: Sequence[_File], engine: Duck) -> list[RejectedRow]:
-            statement = _ranking(Statement(question, _table(engine, files, _wanted(question), numbered=True)), engine)
+            statement = _ranking(Statement(question, _table(engine, files, parts_of(question), numbered=True)), engine)
             rows = engine.run(statement.rejected_rows(reason, limit))
             return [self._rejected(question, reason, row, files) for row in rows]
 
@@ -101,7 +101,7 @@ class FileSource:
         def pull(files: Sequence[_File], engine: Duck) -> Survey:
             header = files[0].header
             if question is not None:
-                statement = Statement(question, _table(engine, files, _wanted(question)))
+                statement = Statement(question, _table(engine, files, parts_of(question)))
                 return survey_of(statement, engine.run, header.names)
             names = tuple(dict.fromkeys(header.names))
             table = _table(engine, files[:1], names)
@@ -190,7 +190,7 @@ class FileSource:
     # --- one question -------------------------------------------------------------------------------------------------
 
     def _answer(self, question: Question, files: Sequence[_File], engine: Duck) -> Tally:
-        statement = _ranking(Statement(question, _table(engine, files, _wanted(question))), engine)
+        statement = _ranking(Statement(question, _table(engine, files, parts_of(question))), engine)
         found = answer(statement, engine.run, self.name, self._spec.slice_limit, _SAMPLE)
         rows = sum(cell.counts.predictions for cell in found.cells if not cell.column)
         rows += found.duplicates + found.outside + sum(found.rejected.values())
@@ -232,13 +232,6 @@ def _ranking(statement: Statement, engine: Duck) -> Statement:
     if not engine.keep("suspects", statement.repeated()):
         return replace(statement, unique=True)
     return replace(statement, suspects=sa.table("suspects", sa.column("digest", sa.BigInteger())))
-
-
-def _wanted(question: Question) -> list[str]:
-    mapped = [
-        value for field in fields(question.columns) if (value := getattr(question.columns, field.name)) is not None
-    ]
-    return list(dict.fromkeys([*mapped, *question.slices, *(name for name, _ in question.where)]))
 
 
 def _table(engine: Duck, files: Sequence[_File], wanted: Sequence[str], *, numbered: bool = False) -> Table:

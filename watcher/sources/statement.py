@@ -11,7 +11,7 @@ Each row ends in exactly one `kind`: usable, outside, duplicate, or the first re
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, fields, replace
 from typing import Any, Final, Literal
 
 import sqlalchemy as sa
@@ -56,6 +56,14 @@ class Table:
     """Names of columns of `rows` to carry along for `rejected_rows`: file and line."""
 
 
+def parts_of(question: Question) -> list[str]:
+    """Return the names of all columns that a question reads, each once."""
+    mapped = [
+        value for field in fields(question.columns) if (value := getattr(question.columns, field.name)) is not None
+    ]
+    return list(dict.fromkeys([*mapped, *question.slices, *(name for name, _ in question.where)]))
+
+
 @dataclass(frozen=True, slots=True)
 class Statement:
     """Builds what one question asks of one table."""
@@ -66,6 +74,8 @@ class Statement:
     """A table of digests (`digest`) of the ids that may occur more than once: only their rows are ranked."""
     unique: bool = False
     """True: no id occurs twice, so nothing needs to be ranked."""
+    prefix: str = ""
+    """Of the names of the stages, which stand beside one another: nested ones overflow SQLite's parser."""
 
     # --- what is asked ------------------------------------------------------------------------------------------------
 
@@ -83,7 +93,7 @@ class Statement:
             ],
         ]
         labelled = sa.and_(usable, rows.c.outcome.is_not(None))
-        sums = {name: condition for name, condition in self._flags(rows, labelled).items()}
+        sums = self._flags(rows, labelled)
         ahead = [rows.c.ahead] if "ahead" in rows.c else []
         if q.columns.cluster:
             return self._by_cluster(rows, keys, sums, labelled)
@@ -94,7 +104,7 @@ class Statement:
             *[flag.label(name) for name, flag in sums.items()],
             sa.case((labelled, rows.c.at)).label("newest"),
             *ahead,
-        ).subquery("flat")
+        ).cte(f"{self.prefix}flat")
         group = [flat.c[key.name] for key in keys] + [flat.c.level]
         return sa.select(
             *group,
@@ -109,14 +119,14 @@ class Statement:
         placed = self._placed()
         names = [self._slice(name) for name in self.question.slices]
         some = sa.select(*[placed.c[name] for name in names]).where(placed.c.kind == USABLE)
-        some_rows = (some.limit(rows) if rows is not None else some).subquery("some")
+        some_rows = (some.limit(rows) if rows is not None else some).cte(f"{self.prefix}some")
         return sa.select(*[sa.func.count(sa.distinct(some_rows.c[name])).label(name) for name in names])
 
     def repeated(self) -> sa.Select[Any]:
         """Select the digests of the ids that may occur more than once."""
         placed = self._placed()
         digest = dialects.Digest(placed.c.id).label("digest")
-        digests = sa.select(digest).where(placed.c.kind == USABLE).subquery("digests")
+        digests = sa.select(digest).where(placed.c.kind == USABLE).cte(f"{self.prefix}digests")
         return sa.select(digests.c.digest).group_by(digests.c.digest).having(sa.func.count() > 1)
 
     def late_labels(self) -> sa.Select[Any]:
@@ -140,15 +150,15 @@ class Statement:
         columns = [column for column in rows.c if column.name.startswith(("raw", "extra"))]
         return sa.select(*columns).where(rows.c.kind == kind_of(reason)).order_by(*columns).limit(limit)
 
-    def looked_at(self) -> sa.Subquery:
+    def looked_at(self) -> sa.CTE:
         """Return the rows with normalised `prediction`, `label` and `at` for a survey; NULL `at` where `where` differs."""
         return self._timed()
 
-    def here(self, rows: sa.Subquery) -> Expression:
+    def here(self, rows: sa.CTE) -> Expression:
         """Whether a row meets the question's `where`."""
         return sa.not_(sa.or_(sa.false(), *self._elsewhere(rows)))
 
-    def slice_columns(self, rows: sa.Subquery) -> list[Expression]:
+    def slice_columns(self, rows: sa.CTE) -> list[Expression]:
         """Return the columns of a stage that hold the slice values."""
         return [rows.c[self._slice(name)] for name in self.question.slices]
 
@@ -184,7 +194,7 @@ class Statement:
         c = self.question.columns
         return {"time": c.time} | ({"labelled_at": c.labelled_at} if c.labelled_at else {})
 
-    def _trimmed(self, since: int | None, *, raw: bool) -> sa.Subquery:
+    def _trimmed(self, since: int | None, *, raw: bool) -> sa.CTE:
         columns, holds = self.table.columns, self.table.holds
         picked = [dialects.Trimmed(columns[column]).label(part) for part, column in self._parts().items()]
         picked += [
@@ -200,9 +210,9 @@ class Statement:
         if since is not None and holds[time] == "instant":  # lets an index on the time column bound the read
             bound = sa.func.to_timestamp(since, type_=sa.DateTime(timezone=True))
             select = select.where(sa.or_(columns[time] >= bound, columns[time].is_(None)))
-        return select.subquery("trimmed")
+        return select.cte(f"{self.prefix}trimmed")
 
-    def _read(self, since: int | None, *, raw: bool) -> sa.Subquery:
+    def _read(self, since: int | None, *, raw: bool) -> sa.CTE:
         trimmed = self._trimmed(since, raw=raw)
         numbers = {"weight", "loss", "labelling_probability"}
         picked: list[Expression] = [column for column in trimmed.c if column.name.startswith(("raw", "extra"))]
@@ -219,9 +229,9 @@ class Statement:
             picked.append(value.label(part))
             if held == "text" and self.question.time_format == "rfc3339":
                 picked.append(dialects.Wall(value).label(f"{part}_wall"))
-        return sa.select(*picked).subquery("read")
+        return sa.select(*picked).cte(f"{self.prefix}read")
 
-    def _timed(self, since: int | None = None, *, raw: bool = False) -> sa.Subquery:
+    def _timed(self, since: int | None = None, *, raw: bool = False) -> sa.CTE:
         read = self._read(since, raw=raw)
         drop = {"time", "labelled_at", "time_wall", "labelled_at_wall"}
         picked: list[Expression] = [column for column in read.c if column.name not in drop]
@@ -233,16 +243,16 @@ class Statement:
                 if self.table.holds[column] == "text":
                     empty = sa.or_(empty, read.c[part] == "")
                 picked.append(sa.case((empty, 0), else_=1).label("labelled_at_given"))
-        rows = sa.select(*picked).subquery("instants")
+        rows = sa.select(*picked).cte(f"{self.prefix}instants")
         kept = [column for column in rows.c if column.name not in ("at_read", "labelled_at_read")]
         times = [
             sa.case((rows.c[name].between(0, LAST_SECOND), rows.c[name])).label(name.removesuffix("_read"))
             for name in ("at_read", "labelled_at_read")
             if name in rows.c
         ]
-        return sa.select(*kept, *times).subquery("timed")
+        return sa.select(*kept, *times).cte(f"{self.prefix}timed")
 
-    def _instant(self, read: sa.Subquery, part: str, held: Held) -> Expression:
+    def _instant(self, read: sa.CTE, part: str, held: Held) -> Expression:
         """Seconds since 1970 of a time column, or NULL; the wall clock of a declared zone is turned by bound offsets."""
         q = self.question
         value = read.c[part]
@@ -277,22 +287,22 @@ class Statement:
         q = self.question
         return q.open_from - (q.cluster_span or 0 if q.columns.cluster else 0)
 
-    def _elsewhere(self, rows: sa.Subquery) -> list[Expression]:
+    def _elsewhere(self, rows: sa.CTE) -> list[Expression]:
         conditions: list[Expression] = []
         for i, (_, wanted) in enumerate(self.question.where):
             column, value = rows.c[f"where{i}"], text_of(wanted)
             conditions.append(column.is_not(None) if value is None else sa.func.coalesce(column, "") != value)
         return conditions
 
-    def _outcome_raw(self, rows: sa.Subquery) -> Expression:
+    def _outcome_raw(self, rows: sa.CTE) -> Expression:
         """The column that says whether a row is labelled."""
         c = self.question.columns
         return rows.c.loss_text if c.loss else rows.c.error if c.error else rows.c.label
 
-    def _placed(self, *, raw: bool = False) -> sa.Subquery:
+    def _placed(self, since: int | None = None, *, raw: bool = False) -> sa.CTE:
         """Give each row its place in time, and the kind that follows from id, time and `where` alone."""
         q, c = self.question, self.question.columns
-        rows = self._timed(raw=raw)
+        rows = self._timed(since, raw=raw)
         at = rows.c.at
         bad_time = at.is_(None)
         if c.labelled_at:
@@ -318,31 +328,32 @@ class Statement:
             unlabelled.append(sa.func.coalesce(rows.c.selected, "").not_in(_TRUE))
         outcome = self._outcome_raw(rows)
         picked.append((sa.case((sa.or_(*unlabelled), None), else_=outcome) if unlabelled else outcome).label("outcome"))
-        return sa.select(*picked).subquery("placed")
+        return sa.select(*picked).cte(f"{self.prefix}placed")
 
     def _reason(self, reason: str, condition: Expression) -> list[tuple[Any, int]]:
         """One branch of `kind`; tests take branches away here to see that their absence is noticed."""
         return [(condition, kind_of(reason))]
 
-    def _ranked(self, *, raw: bool) -> sa.Subquery:
+    def _ranked(self, *, raw: bool) -> sa.CTE:
         """Leave one row of each id usable: in time before late, the highest revision, and nothing if the rest disagrees."""
         placed = self._placed(raw=raw)
         c = self.question.columns
         if not c.id or self.unique:
             return placed
         alone: Expression = placed.c.kind != USABLE
-        among: Expression = placed.c.kind == USABLE
+        live = replace(self, prefix="live_")._placed(self._since(), raw=raw)
+        among: Expression = live.c.kind == USABLE
         if self.suspects is not None:
             digests = sa.select(self.suspects.c.digest)
             alone = sa.or_(alone, dialects.Digest(placed.c.id).not_in(digests))
-            among = sa.and_(among, dialects.Digest(placed.c.id).in_(digests))
-        some = sa.select(placed).where(among).subquery("some")
+            among = sa.and_(among, dialects.Digest(live.c.id).in_(digests))
+        some = sa.select(live).where(among).cte(f"{self.prefix}some")
         order = self._order(some)
         rank = (sa.func.rank().over(partition_by=some.c.id, order_by=order) if order else sa.literal_column("1")).label(
             "rank"
         )
         says = self._says(some).label("says")
-        first = sa.select(*some.c, rank, says).subquery("first")
+        first = sa.select(*some.c, rank, says).cte(f"{self.prefix}first")
         group = [first.c.id, first.c.rank]
         rest = [
             sa.func.coalesce(sa.cast(first.c[name], sa.Text), "")
@@ -354,16 +365,16 @@ class Statement:
             sa.func.row_number().over(partition_by=group, order_by=[first.c.says, *rest]).label("n"),
             sa.func.min(first.c.says).over(partition_by=group).label("least"),
             sa.func.max(first.c.says).over(partition_by=group).label("most"),
-        ).subquery("second")
+        ).cte(f"{self.prefix}second")
         kinds: list[tuple[Any, int]] = [(second.c.rank > 1, DUPLICATE)]
         kinds += self._reason("conflicting-duplicate", second.c.least != second.c.most)
         kinds.append((second.c.n > 1, DUPLICATE))
         names = [column.name for column in placed.c if column.name != "kind"]
         ranked = sa.select(*[second.c[name] for name in names], _kind(kinds))
         others = sa.select(*[placed.c[name] for name in names], placed.c.kind).where(alone)
-        return sa.union_all(ranked, others).subquery("ranked")
+        return sa.union_all(ranked, others).cte(f"{self.prefix}ranked")
 
-    def _order(self, rows: sa.Subquery) -> list[Expression]:
+    def _order(self, rows: sa.CTE) -> list[Expression]:
         order: list[Expression] = [rows.c.late] if self.question.columns.labelled_at else []
         if self.question.columns.revision:
             revision = rows.c.revision
@@ -373,7 +384,7 @@ class Statement:
             order += [size.desc(), text.desc()]
         return order
 
-    def _says(self, rows: sa.Subquery) -> Expression:
+    def _says(self, rows: sa.CTE) -> Expression:
         """What rows of one id must agree in, as one text: time, prediction and label (or error, or loss)."""
         prediction = rows.c.prediction if self.question.columns.prediction else sa.literal_column("''")
         text = sa.func.coalesce(prediction, "")
@@ -385,7 +396,7 @@ class Statement:
             joined = joined.op("||")(sa.literal_column("'|'")).op("||")(part)
         return joined
 
-    def _judged(self, *, raw: bool = False) -> sa.Subquery:
+    def _judged(self, *, raw: bool = False) -> sa.CTE:
         """Give what is still usable the reasons that follow from its values; every kind is final after this."""
         rows = self._ranked(raw=raw)
         q, c = self.question, self.question.columns
@@ -405,10 +416,10 @@ class Statement:
             wrong = sa.or_(rows.c.loss.is_(None), sa.not_(rows.c.loss.between(0.0, 1.0)))
             kinds += self._reason("bad-loss", sa.and_(labelled, wrong))
         names = [column for column in rows.c if column.name != "kind"]
-        judged = sa.select(*names, _kind(kinds)).subquery("judged")
+        judged = sa.select(*names, _kind(kinds)).cte(f"{self.prefix}judged")
         return self._clustered(judged) if c.cluster else judged
 
-    def _unknown(self, rows: sa.Subquery) -> Expression:
+    def _unknown(self, rows: sa.CTE) -> Expression:
         q, c = self.question, self.question.columns
         if c.error:
             return sa.and_(rows.c.outcome.is_not(None), rows.c.outcome.not_in((*_TRUE, *_FALSE)))
@@ -423,7 +434,7 @@ class Statement:
 
     # --- clusters -----------------------------------------------------------------------------------------------------
 
-    def _clustered(self, judged: sa.Subquery) -> sa.Subquery:
+    def _clustered(self, judged: sa.CTE) -> sa.CTE:
         """Place each cluster, whole, in the bucket of its first sample; too long and too large ones are refused."""
         q = self.question
         if q.n_max is None or q.cluster_span is None:
@@ -433,13 +444,13 @@ class Statement:
         usable = judged.c.kind == USABLE
         group = [judged.c.cluster]
         began = sa.func.min(judged.c.at).over(partition_by=group).label("began")
-        some = sa.select(*judged.c, began).where(usable).subquery("some")
+        some = sa.select(*judged.c, began).where(usable).cte(f"{self.prefix}some")
         inside = some.c.at <= some.c.began + q.cluster_span
         flags = self._flags(some, some.c.outcome.is_not(None))
         size = (
             sa.func.sum(sa.case((inside, self._size(flags)), else_=0)).over(partition_by=[some.c.cluster]).label("size")
         )
-        sized = sa.select(*some.c, size).subquery("sized")
+        sized = sa.select(*some.c, size).cte(f"{self.prefix}sized")
         kinds = self._reason("cluster-too-long", sized.c.at > sized.c.began + q.cluster_span)
         kinds.append((sized.c.began < q.open_from, OUTSIDE))
         kinds += self._reason("cluster-too-large", sized.c.size > q.n_max)
@@ -452,7 +463,7 @@ class Statement:
         others = sa.select(*[judged.c[name] for name in names], judged.c.bucket, other.label("kind")).where(
             sa.not_(usable)
         )
-        return sa.union_all(ranked, others).subquery("clustered")
+        return sa.union_all(ranked, others).cte(f"{self.prefix}clustered")
 
     def _size(self, flags: Mapping[str, Expression]) -> Expression:
         """What counts as a label of the measure: all, the positives, or the negatives."""
@@ -462,7 +473,7 @@ class Statement:
 
     def _by_cluster(
         self,
-        rows: sa.Subquery,
+        rows: sa.CTE,
         keys: Sequence[sa.Label[Any] | Any],
         sums: Mapping[str, Expression],
         labelled: Expression,
@@ -475,7 +486,7 @@ class Statement:
             *[flag.label(name) for name, flag in sums.items()],
             sa.case((labelled, rows.c.at)).label("newest"),
             *ahead,
-        ).subquery("flat")
+        ).cte(f"{self.prefix}flat")
         group = [flat.c[key.name] for key in keys]
         one = (
             sa.select(
@@ -486,12 +497,12 @@ class Statement:
                 *[sa.func.max(flat.c.ahead).label("ahead") for _ in ahead],
             )
             .group_by(*group, flat.c.cluster)
-            .subquery("one")
+            .cte(f"{self.prefix}one")
         )
         wrong = {"miss": "misses", "false-alarm": "false_alarms"}.get(self.question.measure, "errors")
         size = self._size({name: one.c[name] for name in sums})
         level = sa.cast(size, sa.Text).op("||")(sa.literal_column("':'")).op("||")(sa.cast(one.c[wrong], sa.Text))
-        leveled = sa.select(*one.c, sa.case((one.c.kind == USABLE, level), else_="").label("level")).subquery("leveled")
+        leveled = sa.select(*one.c, sa.case((one.c.kind == USABLE, level), else_="").label("level")).cte(f"{self.prefix}leveled")
         group = [leveled.c[key.name] for key in keys] + [leveled.c.level]
         return sa.select(
             *group,
@@ -504,7 +515,7 @@ class Statement:
 
     # --- what is added up ---------------------------------------------------------------------------------------------
 
-    def _flags(self, rows: sa.Subquery, labelled: Expression) -> dict[str, Expression]:
+    def _flags(self, rows: sa.CTE, labelled: Expression) -> dict[str, Expression]:
         """Return name -> 0 or 1 (or millionths) of every sum that this question needs."""
         q, c = self.question, self.question.columns
         flags = {"labels": _one(labelled)}
@@ -522,7 +533,7 @@ class Statement:
             flags["false_alarms"] = _one(sa.and_(labelled, sa.not_(positive), wrong))
         return flags
 
-    def _level(self, rows: sa.Subquery, usable: Expression, labelled: Expression) -> Expression:
+    def _level(self, rows: sa.CTE, usable: Expression, labelled: Expression) -> Expression:
         q, c = self.question, self.question.columns
         if c.weight:
             levels, number, condition = q.weight_levels, rows.c.weight, labelled
