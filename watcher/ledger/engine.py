@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 import sqlite3
 from collections.abc import Iterator
 from contextlib import contextmanager
@@ -15,8 +16,10 @@ from sqlalchemy.pool import QueuePool
 from watcher.errors import LedgerBusy, LedgerDamaged, UsageError, WatcherError
 
 BUSY_SECONDS = 5.0
-"""How long SQLite waits for another transaction before it says "database is locked"."""
+"""How long a transaction waits for another before it gives up."""
 WRITES = "watcher_writes"
+_NAMES = re.compile(r'\b(user|role) "[^"]*"')
+"""Where PostgreSQL repeats who wanted to come in."""
 
 
 def parse_url(url: str) -> URL:
@@ -122,6 +125,8 @@ def writing(engine: Engine) -> Iterator[Connection]:
     with translated(), engine.connect() as connection:
         connection.execution_options(**{WRITES: True})
         with connection.begin():
+            if engine.dialect.name == "postgresql":
+                connection.exec_driver_sql(f"SET LOCAL lock_timeout = {int(BUSY_SECONDS * 1000)}")
             yield connection
 
 
@@ -139,6 +144,7 @@ def translated() -> Iterator[None]:
 
 
 def _named(said: str) -> WatcherError:
+    said = _NAMES.sub(r'\1 "..."', said)
     low = said.lower()
     if "locked" in low or "lock timeout" in low or "deadlock" in low:
         return LedgerBusy(f"the ledger is locked by another process ({said}); nothing was written, try again")

@@ -334,6 +334,8 @@ class Ledger:
             self._lock.take()
         if self._lease is not None:
             with writing(self._engine) as connection:
+                # Behind the head row, so that two who find no lease do not both insert one.
+                read_head(connection, lock=True)
                 self._lease.take(connection)
 
     def _release(self) -> None:
@@ -349,6 +351,9 @@ class Ledger:
 def _ledger_id(engine: Engine, *, make: bool, new_id: str | None) -> str:
     if make:
         with writing(engine) as connection:
+            if engine.dialect.name == "postgresql":
+                # Two first starts at once: the second waits and finds the tables. The number is drawn once, for this use.
+                connection.exec_driver_sql("SELECT pg_advisory_xact_lock(6920317448201)")
             if not inspect(connection).has_table(META.name):
                 _make_tables(connection, new_id or secrets.token_hex(16))
     with reading(engine) as connection:
