@@ -81,6 +81,9 @@ def _handler(kept: Receiver) -> type[BaseHTTPRequestHandler]:
             self.end_headers()
             self.wfile.write(reply.body)
 
+        def do_GET(self) -> None:
+            self.do_POST()
+
         def log_message(self, *args: object) -> None:
             return
 
