@@ -13,7 +13,7 @@ from watcher.errors import UsageError
 from watcher.ledger.audit import Replayed, audit
 from watcher.ledger.store import Ledger
 from watcher.ledger.terms import terms_digest
-from watcher.records import Cell, Entry, Standing, TermDraft, Terms
+from watcher.records import Cell, Entry, Event, Standing, TermDraft, Terms
 from watcher.verdict import Book, Key, advance
 
 DERIVED: Final = frozenset(

@@ -68,28 +68,32 @@ def _configured(
     if at is not None and at > clock() and not dry_run:
         raise UsageError(f"--at {at.isoformat()} lies after this machine's clock: only with --dry-run")
     ledger = assembly.open_ledger(config, write=not dry_run)
-    outcomes = []
     try:
         with contextlib.nullcontext() if dry_run else ledger.writer():
-            for table in config.source:
-                outcomes.append(
-                    attempt(
-                        ledger,
-                        assembly.source_of(config, table),
-                        assembly.watched(config, table.name),
-                        int(now.timestamp()),
-                        time.monotonic,
-                        at_given=at is not None,
-                        keep=not dry_run,
-                        routes=assembly.routings(config),
-                        slice_limit=table.slice_limit,
-                    )
-                )
+            outcomes = [
+                _one(config, table, ledger, now, at_given=at is not None, keep=not dry_run) for table in config.source
+            ]
     except ClockWentBack as error:
         if at is not None:
             raise UsageError(f"--at: {error}") from None
         raise
     return outcomes, ledger, assembly.units(config)
+
+
+def _one(
+    config: settings.Settings, table: settings.SourceTable, ledger: Ledger, now: datetime, *, at_given: bool, keep: bool
+) -> Outcome:
+    return attempt(
+        ledger,
+        assembly.source_of(config, table),
+        assembly.watched(config, table.name),
+        int(now.timestamp()),
+        time.monotonic,
+        at_given=at_given,
+        keep=keep,
+        routes=assembly.routings(config),
+        slice_limit=table.slice_limit,
+    )
 
 
 def _drafted(

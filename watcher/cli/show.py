@@ -36,9 +36,8 @@ def promise(standings: Sequence[Standing], terms: Terms, unit: str) -> Renderabl
     head.append(f"  version {safe(terms.version)}  ")
     head.append(f" {whole.state} ", style=STATE_STYLE[whole.state])
     parts: list[RenderableType] = [head, Padding(Text(wording.sentence(whole, terms, unit)), (0, 0, 0, 2))]
-    for standing in standings:
-        if standing.column and (standing.state == "breached" or "warning" in standing.flags):
-            parts.append(Padding(Text(wording.sentence(standing, terms, unit)), (0, 0, 0, 2)))
+    notable = [s for s in standings if s.column and (s.state == "breached" or "warning" in s.flags)]
+    parts += [Padding(Text(wording.sentence(s, terms, unit)), (0, 0, 0, 2)) for s in notable]
     flags = [Text("• " + line) for line in wording.flag_sentences(whole, terms)]
     parts += [Padding(flag, (0, 0, 0, 2)) for flag in flags]
     parts.append(Padding(numbers(standings), (1, 0, 0, 2)))
