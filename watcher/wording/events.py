@@ -141,7 +141,7 @@ def _superseded(event: Event, terms: Terms | None) -> str:
 
 def _acknowledged(event: Event, terms: Terms | None) -> str:
     del terms
-    who = f" by {_plain(event.facts['by'])}" if event.facts.get("by") else ""
+    who = f" by {_plain(event.facts['who'])}" if event.facts.get("who") else ""
     note = f" “{safe(str(event.facts['note']), 200)}”" if event.facts.get("note") else ""
     return f"the breach was acknowledged{who}{note}; it stands."
 
