@@ -15,7 +15,8 @@ from rich.text import Text
 
 from watcher import assembly, settings, wording
 from watcher.cli import show
-from watcher.daemon import Hooks, Service, logs
+from watcher.daemon import logs
+from watcher.daemon.service import Hooks, Service
 from watcher.demo.scenario import DAY, DAYS, RELEASED, Row, generate
 from watcher.demo.writing import append, prepare
 from watcher.errors import WatcherError
@@ -63,8 +64,8 @@ async def _play(path: Path, rows: tuple[Row, ...], clock: Clock) -> None:
         out.print(Text(f"The invented parcel network lies in {path.parent}/; a simulated day passes every second."))
         out.print(Text(f"Look at {address}/ (the board) and {address}/metrics; Ctrl-C ends the demo."))
 
-    service = Service(path, Hooks(clock=clock, started=started, adjust=_hurried))
-    telling = asyncio.create_task(_tell(path, clock, feeder))
+    service = Service(path, Hooks(clock=clock, started=started, adjust=_hurried, at_point=feeder.before_look))
+    telling = asyncio.create_task(_tell(path, clock))
     try:
         await service.run()
     finally:
@@ -102,13 +103,17 @@ class _Feeder:
             self._next += 1
         append(self._folder, self._rows[first : self._next])
 
+    def before_look(self, point: str) -> None:
+        """Write before the daemon reads: a file that changes under a pull would put the look off."""
+        if point == "before-look":
+            self.feed()
 
-async def _tell(path: Path, clock: Clock, feeder: _Feeder) -> None:
+
+async def _tell(path: Path, clock: Clock) -> None:
     out, seen, told_over = show.console(), (0, -1), False
     config = settings.read(path)
     while True:
         await asyncio.sleep(TICK)
-        feeder.feed()
         with contextlib.suppress(WatcherError), assembly.open_ledger(config, write=False) as ledger:
             events = [e for e in reversed(ledger.events(limit=50)) if (e.look, e.n) > seen]
             for stored in events:

@@ -8,7 +8,8 @@ from pathlib import Path
 import click
 
 from watcher.cli.common import CONFIG
-from watcher.daemon import Service, logs
+from watcher.daemon import logs
+from watcher.daemon.service import Service
 
 
 @click.command()

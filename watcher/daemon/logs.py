@@ -35,7 +35,9 @@ def configure(stream: TextIO = sys.stderr) -> structlog.stdlib.BoundLogger:
     root = logging.getLogger()
     root.handlers = [handler]
     root.setLevel(logging.INFO)
-    for quiet in ("apscheduler", "httpx", "httpcore", "uvicorn.access"):
+    for quiet in ("httpx", "httpcore", "uvicorn.access"):
         logging.getLogger(quiet).setLevel(logging.WARNING)
+    # A tick that finds the look before it still under way is left out: that is what max_instances is for.
+    logging.getLogger("apscheduler").setLevel(logging.ERROR)
     logger: structlog.stdlib.BoundLogger = structlog.get_logger("watcher")
     return logger

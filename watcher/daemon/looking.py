@@ -44,13 +44,13 @@ class Looker:
         structlog.contextvars.clear_contextvars()
         structlog.contextvars.bind_contextvars(source=name)
         try:
+            self._hooks.at_point("before-look")
             signature = watch.source.signature() if name in self._quiet else None
             if name in self._quiet and signature == self._quiet[name][0] and now < self._quiet[name][1]:
                 return None
             self._quiet.pop(name, None)
             structlog.contextvars.bind_contextvars(look=ledger.head().look)
             signature = watch.source.signature()
-            self._hooks.at_point("before-look")
             outcome = attempt(
                 ledger,
                 watch.source,
