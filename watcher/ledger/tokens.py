@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import hashlib
+import secrets
 from collections.abc import Callable
 from contextlib import AbstractContextManager
 from dataclasses import dataclass
@@ -17,6 +19,11 @@ from watcher.ledger.tables import TOKEN
 
 Role = Literal["read", "act"]
 ROLES: Final = ("read", "act")
+PREFIX: Final = "watcher_"
+"""How every token begins, so that it is recognised where it should not be: in an address, a log, a repository."""
+_BYTES: Final = 32
+_LONGEST: Final = 200
+"""Characters beyond which a text is no token; it is not even hashed."""
 Transaction = Callable[[], AbstractContextManager[Connection]]
 
 
@@ -30,12 +37,34 @@ class StoredToken:
     revoked: datetime | None
 
 
+def digest_of(token: str) -> str:
+    """What the ledger keeps of a token: SHA-256, hex. A drawn token has 256 random bits, so a slow hash adds nothing."""
+    return hashlib.sha256(token.encode("utf-8", "surrogatepass")).hexdigest()
+
+
 class Tokens:
     """The token table of a ledger."""
 
     def __init__(self, reading: Transaction, writing: Transaction) -> None:
         self._reading = reading
         self._writing = writing
+
+    def make(self, name: str, role: Role, created: datetime) -> str:
+        """Draw a token, store its digest and return it: this is the only time that it can be seen.
+
+        Raises UsageError for a name in use, an empty or overlong name, or an unknown role.
+        """
+        if not name.strip() or len(name) > 80:
+            raise UsageError(f"token name = {name!r}: 1 to 80 characters that say who will use it are needed")
+        token = PREFIX + secrets.token_urlsafe(_BYTES)
+        self.add(name, role, digest_of(token), created)
+        return token
+
+    def verify(self, token: str) -> StoredToken | None:
+        """The token that somebody shows; None when there is none like it or it was revoked."""
+        if not token.startswith(PREFIX) or len(token) > _LONGEST:
+            return None
+        return self.find(digest_of(token))
 
     def add(self, name: str, role: Role, digest: str, created: datetime) -> None:
         """Store a token by its digest (SHA-256, hex). Raises UsageError for a name in use or an unknown role."""
