@@ -11,7 +11,8 @@ from bounds.sequential import bernoulli_cusum_anss
 from watcher.bounds.designs import per_label
 from watcher.bounds.evidence import evidence
 from watcher.bounds.mixture import RESTART
-from watcher.bounds.run_length import CALM, Warning, advance_warning, walk_warnings, warning_sums
+from watcher.bounds.run_length import CALM, advance_warning, walk_warnings, warning_sums
+from watcher.bounds.run_length import Warning as Warned
 from watcher.bounds.weighted import Weighted
 
 DAY = 86400
@@ -57,13 +58,13 @@ def test_walking_at_once_or_bucket_by_bucket_is_the_same() -> None:
     rng = np.random.default_rng(92)
     rates = np.repeat([0.02, 0.07, 0.02, 0.05, 0.01], [200, 30, 150, 120, 230])
     buckets, ends = _days(rng, 70, rates), _ends(rates.size)
-    once = walk_warnings(Warning(), buckets, 0, ends, 0.03, LOG_A)
-    weekly, events = Warning(), []
+    once = walk_warnings(Warned(), buckets, 0, ends, 0.03, LOG_A)
+    weekly, events = Warned(), []
     for since in range(0, rates.size, 7):
         until = min(since + 7, rates.size)
         weekly, new = walk_warnings(weekly, buckets[:until], since, ends[:until], 0.03, LOG_A)
         events += new
-    state, single = Warning(), []
+    state, single = Warned(), []
     for t in range(rates.size):
         state, kind = advance_warning(state, buckets, t, ends, 0.03, LOG_A)
         single += [(t, kind)] if kind else []
@@ -75,26 +76,26 @@ def test_walking_at_once_or_bucket_by_bucket_is_the_same() -> None:
 def test_raising_drops_all_windows() -> None:
     """The bucket that crosses raises the warning and starts afresh behind itself."""
     buckets = np.array([[70, 1], [70, 1], [70, 20], [70, 1]])
-    state, kind = advance_warning(Warning(), buckets, 2, _ends(4), 0.03, LOG_A)
+    state, kind = advance_warning(Warned(), buckets, 2, _ends(4), 0.03, LOG_A)
 
     assert kind == "warning"
-    assert state == Warning(reset=3, standing=True, calm_since=3 * DAY)
+    assert state == Warned(reset=3, standing=True, calm_since=3 * DAY)
 
 
 def test_over_after_28_calm_days() -> None:
     """A standing warning ends 28 days after the fresh sum fell below sqrt(A), not a day earlier; the windows stay."""
     buckets = np.array([[70, 20], *[[70, 1]] * 40])
-    state, events = walk_warnings(Warning(), buckets, 0, _ends(41), 0.03, LOG_A)
+    state, events = walk_warnings(Warned(), buckets, 0, _ends(41), 0.03, LOG_A)
 
     assert events == ((0, "warning"), (28, "warning-over"))
-    assert state == Warning(reset=1)
+    assert state == Warned(reset=1)
 
 
 def test_a_restless_sum_starts_the_calm_again() -> None:
     """The fresh sum at or over sqrt(A), below A, makes the 28 days count anew."""
     buckets = np.array([[70, 20], *[[70, 1]] * 20, [70, 9], *[[70, 1]] * 60])
     sums = np.exp(warning_sums(buckets[1:], 0.03))
-    _, events = walk_warnings(Warning(), buckets, 0, _ends(82), 0.03, LOG_A)
+    _, events = walk_warnings(Warned(), buckets, 0, _ends(82), 0.03, LOG_A)
     restless = 1 + np.flatnonzero(sums >= math.sqrt(1095))
 
     assert sums.max() < 1095
@@ -105,10 +106,10 @@ def test_a_restless_sum_starts_the_calm_again() -> None:
 def test_a_further_crossing_makes_no_event() -> None:
     """While the warning stands, the sum crosses A again: windows dropped, no second event, calm counts anew."""
     buckets = np.array([[70, 20], [70, 20], *[[70, 1]] * 40])
-    state, events = walk_warnings(Warning(), buckets[:2], 0, _ends(2), 0.03, LOG_A)
+    state, events = walk_warnings(Warned(), buckets[:2], 0, _ends(2), 0.03, LOG_A)
     _, later = walk_warnings(state, buckets, 2, _ends(42), 0.03, LOG_A)
 
-    assert state == Warning(reset=2, standing=True, calm_since=2 * DAY)
+    assert state == Warned(reset=2, standing=True, calm_since=2 * DAY)
     assert events == ((0, "warning"),)
     assert later == ((29, "warning-over"),)
 
@@ -116,7 +117,7 @@ def test_a_further_crossing_makes_no_event() -> None:
 def test_state_is_made_of_integers_and_booleans() -> None:
     """What is kept between looks holds no float."""
     rng = np.random.default_rng(93)
-    state, _ = walk_warnings(Warning(), _days(rng, 70, np.full(60, 0.06)), 0, _ends(60), 0.03, LOG_A)
+    state, _ = walk_warnings(Warned(), _days(rng, 70, np.full(60, 0.06)), 0, _ends(60), 0.03, LOG_A)
 
     assert [type(getattr(state, name)) for name in state.__dataclass_fields__] == [int, bool, int]
 
@@ -125,10 +126,10 @@ def test_state_is_made_of_integers_and_booleans() -> None:
     ("call", "name"),
     [
         (lambda: warning_sums(np.zeros((3, 3)), 0.03), "buckets"),
-        (lambda: walk_warnings(Warning(reset=2), np.zeros((3, 2)), 1, _ends(3), 0.03, 5.0), "since"),
-        (lambda: walk_warnings(Warning(), np.zeros((3, 2)), 4, _ends(3), 0.03, 5.0), "since"),
-        (lambda: walk_warnings(Warning(), np.zeros((3, 2)), 0, _ends(2), 0.03, 5.0), "since"),
-        (lambda: walk_warnings(Warning(), np.zeros((3, 2)), 0, _ends(3), 0.03, 0.0), "log_A"),
+        (lambda: walk_warnings(Warned(reset=2), np.zeros((3, 2)), 1, _ends(3), 0.03, 5.0), "since"),
+        (lambda: walk_warnings(Warned(), np.zeros((3, 2)), 4, _ends(3), 0.03, 5.0), "since"),
+        (lambda: walk_warnings(Warned(), np.zeros((3, 2)), 0, _ends(2), 0.03, 5.0), "since"),
+        (lambda: walk_warnings(Warned(), np.zeros((3, 2)), 0, _ends(3), 0.03, 0.0), "log_A"),
     ],
 )
 def test_nonsense_is_refused_by_name(call: object, name: str) -> None:

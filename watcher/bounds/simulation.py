@@ -25,6 +25,8 @@ Progress = Callable[[float], None]
 """Called with the fraction done, 0 to 1."""
 _TABLE: Final = 4096
 """Largest bucket for which the factors of every possible count are laid out beforehand."""
+_BLOCK: Final = 500
+"""Streams whose numbers stay in the cache of a core."""
 _SHIFTS: Final = np.concatenate([LIFE.shifts, RESTART.shifts])
 _WEIGHTS: Final = np.concatenate([BREACH.release * LIFE.weights, RESTART.weights])
 _LIFE: Final = LIFE.shifts.size
@@ -202,6 +204,17 @@ def false_breach(
     tolerance before restart j and tilted by the shift from it on. The full total is the likelihood ratio of such streams
     to streams at the tolerance, so the chance is the mean of 1{cross} exp(-full total at the crossing).
     """
+    values = []
+    for first in range(0, draws, _BLOCK):
+        values.append(_weights_of_crossings(setting, buckets, min(_BLOCK, draws - first), rng))
+        if progress is not None:
+            progress(min(1.0, (first + _BLOCK) / draws))
+    everything = np.concatenate(values)
+    return FalseBreach(float(everything.mean()), float(everything.std() / math.sqrt(draws)))
+
+
+def _weights_of_crossings(setting: Setting, buckets: int, draws: int, rng: np.random.Generator) -> Floats:
+    """1{cross} exp(-full total at the crossing) of some streams drawn for `false_breach`."""
     eps = setting.tolerance
     shares = np.append(BREACH.shares(setting.restarts, buckets), BREACH.remainder(setting.restarts, buckets))
     window = rng.choice(buckets + 1, size=draws, p=shares / shares.sum())
@@ -216,8 +229,6 @@ def false_breach(
         if crossed.any():
             values[names[crossed]] = np.exp(-streams.keep(crossed).totals(full=True))
             streams, names = streams.keep(~crossed), names[~crossed]
-        if progress is not None:
-            progress((t + 1) / buckets)
         if not len(names):
             break
-    return FalseBreach(float(values.mean()), float(values.std() / math.sqrt(draws)))
+    return values
