@@ -169,7 +169,7 @@ def look(
             _refuse_strangers(source, asked, tally)
         results.append(_judge(ledger, source, each, asked, tally, now))
     changed = bool(further) or any(result.changed for result in results)
-    entry = _entry(source.name, now, expected, known, results, routes, further)
+    entry = _entry(ledger, source.name, now, expected, known, results, routes, further)
     head = ledger.commit(entry) if changed and keep else ledger.head()
     return Outcome(
         source=source.name,
@@ -423,6 +423,7 @@ def _samples(
 
 
 def _entry(
+    ledger: Ledger,
     source: str,
     now: int,
     expected: int,
@@ -435,9 +436,9 @@ def _entry(
     events: list[Event] = list(further)
     for each, result in zip(known, results, strict=True):
         if each.supersedes is not None:
-            closing, event = _close(each.supersedes, each.watched.terms)
+            closing, ended = _close(ledger, each.supersedes, each.watched.terms, now)
             drafts.append(closing)
-            events.append(event)
+            events += ended
         drafts.append(result.draft)
         events += result.events
     return Entry(
@@ -454,8 +455,14 @@ def _entry(
     )
 
 
-def _close(old: StoredTerm, new: Terms) -> tuple[TermDraft, Event]:
+def _close(ledger: Ledger, old: StoredTerm, new: Terms, now: int) -> tuple[TermDraft, list[Event]]:
+    """The superseded version with its final verdict: what had been counted, judged once more at the time of the look."""
     terms = old.terms
+    counts, cells = table(ledger.counts(old.id)), ledger.cells(old.id)
+    late = max((s.late_labels for s in ledger.standings(promise=terms.promise, version=terms.version)), default=0)
+    remarks = Remarks(stale_after=max(7 * 86400, 2 * terms.label_lag), late_labels=late)
+    book = build(terms, old.digest, cells, counts, old.sealed_until, old.sealed_until, ledger.memories(old.id))
+    verdict = advance(book, now, remarks)
     draft = TermDraft(
         promise=terms.promise,
         version=terms.version,
@@ -465,13 +472,14 @@ def _close(old: StoredTerm, new: Terms) -> tuple[TermDraft, Event]:
         gone=(),
         sealed=(),
         sealed_until=old.sealed_until,
-        remarks=Remarks(),
-        standings=(),
-        memories=(),
+        remarks=remarks,
+        standings=diagnose(terms, counts, old.sealed_until, now, verdict.standings),
+        memories=verdict.memories,
         closed=True,
     )
-    facts = {"by": new.version, "released": moment(new.released).isoformat()}
-    return draft, Event("superseded", terms.promise, terms.version, "", "", None, facts)
+    breaches = sorted({s.breach.number for s in verdict.standings if s.breach})
+    facts = {"by": new.version, "released": moment(new.released).isoformat(), "answers_breaches": breaches}
+    return draft, [Event("superseded", terms.promise, terms.version, "", "", None, facts), *verdict.events]
 
 
 def draft_notices(events: Sequence[Event], drafts: Sequence[TermDraft], routes: Sequence[Routing]) -> list[NoticeDraft]:
@@ -609,7 +617,7 @@ def _failed(
         if state.failing_since is None:
             facts = {"source": source, "reason": failure.reason, "detail": failure.detail[:500]}
             events = (Event("source-failed", "", "", "", "", None, facts),)
-            head = ledger.commit(_entry(source, now, ledger.newest_look(source)[0], (), (), routes, events))
+            head = ledger.commit(_entry(ledger, source, now, ledger.newest_look(source)[0], (), (), routes, events))
         ledger.save_source_state(after)
     return Outcome(
         source=source,

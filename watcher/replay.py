@@ -118,11 +118,12 @@ class Replay:
             state.memories = kept or state.memories
 
     def _open(self, entry: Entry) -> list[TermDraft]:
+        """The drafts to be taken in: none beyond the limit."""
         if self._left is not None:
             if self._left == 0:
                 return []
             self._left -= 1
-        return [draft for draft in entry.terms if not draft.closed]
+        return list(entry.terms)
 
     def _state(self, draft: TermDraft) -> _State:
         name = (draft.promise, draft.version)

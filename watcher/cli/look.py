@@ -55,7 +55,7 @@ def look(
         if as_json:
             print_json(_json(outcomes))
         else:
-            _print(outcomes, units)
+            _print(outcomes, units, kept=target.suffix.lower() == ".toml")
     standings = [standing for outcome in outcomes for standing in outcome.standings]
     failed = any(outcome.failed for outcome in outcomes)
     ctx.exit(EXIT_BREACH if any_breach(standings) else EXIT_FAILURE if failed else EXIT_OK)
@@ -144,7 +144,7 @@ def _json(outcomes: Sequence[Outcome]) -> dict[str, object]:
     )
 
 
-def _print(outcomes: Sequence[Outcome], units: dict[tuple[str, str], str]) -> None:
+def _print(outcomes: Sequence[Outcome], units: dict[tuple[str, str], str], *, kept: bool) -> None:
     out = show.console()
     for outcome in outcomes:
         names = list(dict.fromkeys((s.promise, s.version) for s in outcome.standings))
@@ -160,4 +160,4 @@ def _print(outcomes: Sequence[Outcome], units: dict[tuple[str, str], str]) -> No
         ):
             if part is not None:
                 out.print(part)
-    out.print(show.foot(outcomes[-1].head, written=any(outcome.written for outcome in outcomes)))
+    out.print(show.foot(outcomes[-1].head, written=any(outcome.written for outcome in outcomes), kept=kept))

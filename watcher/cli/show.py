@@ -133,12 +133,12 @@ def events(happened: Sequence[Event]) -> RenderableType | None:
     )
 
 
-def foot(head: Head, *, written: bool) -> Text:
+def foot(head: Head, *, written: bool, kept: bool = True) -> Text:
     """Look number and chain head: what `audit --head` compares with."""
-    if not head.look:
-        return Text("Nothing is kept: this was judged in memory.", style="dim")
-    kept = "recorded as" if written else "nothing new; the ledger stays at"
-    return Text(f"{kept} look {head.look}, head {head.digest[:16]}…  (whole: --json)", style="dim")
+    if not kept:
+        return Text("Nothing is kept: this was judged in memory only.", style="dim")
+    told = "recorded as" if written else "nothing new; the ledger stays at"
+    return Text(f"{told} look {head.look}, head {head.digest[:16]}…  (whole: --json)", style="dim")
 
 
 def moment(epoch: int) -> datetime:
