@@ -11,7 +11,7 @@ from zoneinfo import ZoneInfo
 from watcher.records import CellCounts, Terms
 from watcher.report.axes import fixed, number_axis, rate_axis, time_axis
 from watcher.report.snapshot import DayStanding
-from watcher.report.theme import THEMES, Scheme, Spec, chart, inline, label, tips_layer
+from watcher.report.theme import THEMES, Scheme, Spec, chart, inline, label, limit_rule, tips_layer
 from watcher.wording import percent, rate
 
 _MOST_DAYS: Final = 400
@@ -237,18 +237,7 @@ def weeks(
             "mark": {"type": "point", "color": theme.muted, "size": 34, "filled": False, "strokeWidth": 1.3},
             "encoding": {"x": x, "y": {**y, "field": "rate"}},
         },
-        {
-            "data": inline([{}]),
-            "mark": {"type": "rule", "color": theme.ink, "strokeDash": [5, 4], "strokeWidth": 1},
-            "encoding": {"y": {**y, "datum": terms.tolerance}},
-        },
-        label(
-            f"promised: at most {rate(terms.tolerance)}",
-            x=fixed(4),
-            y={**y, "datum": terms.tolerance},
-            colour=theme.ink,
-            dy=-8,
-        ),
+        *limit_rule(terms.tolerance, f"promised: at most {rate(terms.tolerance)}", y, scheme),
     ]
     newest = next((bar for bar in reversed(bars) if bar.lower is not None and bar.rate is not None), None)
     told = f"Weekly rates with their intervals, {len(bars)} weeks."

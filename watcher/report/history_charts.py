@@ -10,7 +10,7 @@ from typing import Any, Final
 from watcher.records import Breach, Standing, Terms
 from watcher.report.axes import apart, fixed, number_axis, rate_axis, time_axis, wall
 from watcher.report.snapshot import DayStanding
-from watcher.report.theme import MARGIN, THEMES, Scheme, Spec, chart, inline, label, tips_layer
+from watcher.report.theme import MARGIN, THEMES, Scheme, Spec, chart, inline, label, limit_rule, tips_layer
 from watcher.text import safe
 from watcher.wording import day, headline, last, name, nats, percent, rate
 
@@ -69,7 +69,7 @@ def bounds(
         },
         _line(values, frame, {**y, "field": "recent"}, theme.muted, dash=[2, 2], thickness=1.2),
         _line(values, frame, {**y, "field": "rate"}, theme.accent),
-        *_limit(terms.tolerance, f"promised: at most {rate(terms.tolerance)}", frame, y),
+        *limit_rule(terms.tolerance, f"promised: at most {rate(terms.tolerance)}", y, scheme),
     ]
     newest = shown[-1].standing if shown else None
     if newest is not None:
@@ -100,7 +100,7 @@ def total(
     y = number_axis(low, top)
     layers = [
         _line(values, frame, {**y, "field": "total"}, theme.accent),
-        *(_limit(bar, f"broken from {nats(bar)} nats on", frame, y) if shown else []),
+        *(limit_rule(bar, f"broken from {nats(bar)} nats on", y, scheme) if shown else []),
     ]
     newest = shown[-1].standing if shown else None
     if newest is not None:
@@ -215,20 +215,6 @@ def _line(
     if dash:
         mark["strokeDash"] = dash
     return {"data": inline(values), "mark": mark, "encoding": {"x": frame.x, "y": y}}
-
-
-def _limit(value: float, text: str, frame: _Frame, y: Spec) -> list[Spec]:
-    """A dashed rule across the chart, named at its left end, where no line has got to yet."""
-    theme = THEMES[frame.scheme]
-    place = {**y, "datum": value}
-    rule = {
-        "data": inline([{}]),
-        "mark": {"type": "rule", "color": theme.ink, "strokeDash": [5, 4], "strokeWidth": 1},
-        "encoding": {"y": place},
-    }
-    halo = label(text, x=fixed(4), y=place, colour=theme.paper, dy=-8)
-    halo["mark"] |= {"stroke": theme.paper, "strokeWidth": 4, "strokeJoin": "round"}
-    return [rule, halo, label(text, x=fixed(4), y=place, colour=theme.ink, dy=-8)]
 
 
 def _end_labels(newest: Standing, accent: str, muted: str) -> list[tuple[float, str, str]]:

@@ -8,7 +8,7 @@ from functools import cache
 from typing import Any, Final
 
 from jinja2 import Environment, PackageLoader, StrictUndefined
-from markupsafe import Markup
+from markupsafe import Markup, escape
 
 from watcher import wording
 from watcher.records import Interval, Terms
@@ -23,7 +23,7 @@ from watcher.wording import numbers
 Draw = Callable[[Spec, str], str]
 """(spec, prefix of the ids inside) -> SVG text."""
 
-_WIDTH: Final = 560
+_WIDTH: Final = 540
 _WEEKS: Final = 16
 """Weeks in the picture of weeks."""
 _BREACHED: Final = 3
@@ -73,7 +73,7 @@ def as_html(report: Report, draw: Draw = render.svg) -> str:
 
 @cache
 def _environment() -> Environment:
-    return Environment(
+    environment = Environment(
         loader=PackageLoader("watcher.report", "templates"),
         autoescape=True,
         undefined=StrictUndefined,
@@ -81,6 +81,23 @@ def _environment() -> Environment:
         lstrip_blocks=True,
         keep_trailing_newline=True,
     )
+    environment.filters["code"] = _code
+    return environment
+
+
+def _code(text: str) -> Markup:
+    """What stands between backticks as code; everything is escaped first."""
+    pieces = [escape(piece) for piece in text.split("`")]
+    return Markup("").join(Markup("<code>{}</code>").format(p) if i % 2 else p for i, p in enumerate(pieces))
+
+
+def _summary(each: PromiseReport) -> str:
+    text = wording.headline(each.whole.standing, each.terms)
+    slices = [cell.standing for cell in each.cells[1:]]
+    broken = sum(standing.state == "breached" for standing in slices)
+    if broken:
+        text += f"; in {broken} of its {wording.counted(len(slices), 'slice')} it is broken"
+    return text[0].upper() + text[1:] + "."
 
 
 def _title(promise: str, version: str) -> str:
@@ -93,6 +110,7 @@ def _promise(each: PromiseReport, picture: Callable[[Spec], Markup]) -> dict[str
     return {
         "title": _title(terms.promise, terms.version),
         "state": whole.standing.state,
+        "summary": _summary(each),
         "sentence": wording.sentence(whole.standing, terms, each.unit),
         "broken": [
             wording.sentence(cell.standing, terms, each.unit) for cell in slices if cell.standing.state == "breached"

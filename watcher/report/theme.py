@@ -99,6 +99,20 @@ def label(text: str, *, x: Spec, y: Spec, colour: str, align: str = "left", dx: 
     }
 
 
+def limit_rule(value: float, text: str, y: Spec, scheme: Scheme) -> list[Spec]:
+    """A dashed rule across the chart, named at its left end with a halo that keeps the name legible over what is below."""
+    theme = THEMES[scheme]
+    place = {**y, "datum": value}
+    rule = {
+        "data": inline([{}]),
+        "mark": {"type": "rule", "color": theme.ink, "strokeDash": [5, 4], "strokeWidth": 1},
+        "encoding": {"y": place},
+    }
+    halo = label(text, x={"value": 4}, y=place, colour=theme.paper, dy=-8)
+    halo["mark"] |= {"stroke": theme.paper, "strokeWidth": 4, "strokeJoin": "round"}
+    return [rule, halo, label(text, x={"value": 4}, y=place, colour=theme.ink, dy=-8)]
+
+
 def tips_layer(
     values: list[dict[str, Any]], x: Spec, y: Spec, fields: Sequence[tuple[str, str, str | None]], scheme: Scheme
 ) -> Spec:

@@ -25,7 +25,7 @@ def _share(found: Mapping[str, Any], standing: Standing, terms: Terms) -> str:
     share, missing = found.get("labelled_share"), found.get("unlabelled")
     if share is None:
         return ""
-    rest = f"; {counted(int(missing), 'sample')} of them {'is' if missing == 1 else 'are'} not" if missing else ""
+    rest = f"; {int(missing):,} {'is' if missing == 1 else 'are'} not" if missing else ""
     return f"{percent(float(share))} of the predictions in the evidence are labelled{rest}."
 
 
