@@ -10,7 +10,8 @@ from sqlalchemy import Connection, bindparam, delete, func, insert, select, upda
 
 from watcher.errors import LedgerBusy, UsageError
 from watcher.ledger import canon, chain, outbox, rejects
-from watcher.ledger.rows import find_term, read_cells, read_head, upsert, write_head
+from watcher.ledger.counts import integers_of
+from watcher.ledger.rows import find_term, read_cells, read_head, upsert, upsert_plain, write_head
 from watcher.ledger.sheet import event_facts, pack, part_text, sheet_text
 from watcher.ledger.standing import standing_body
 from watcher.ledger.tables import BUCKET, CELL, EVENT, LOOK, TERM, VERDICT
@@ -195,7 +196,7 @@ def _write_buckets(connection: Connection, term: _Term, number: int) -> None:
         ]
     except KeyError as error:
         raise ValueError(f"promise {term.draft.promise!r}: counts of {error.args[0]}, which is no cell") from error
-    upsert(connection, BUCKET, ("cell", "start", "level"), rows)
+    upsert_plain(connection, BUCKET, 3, ("cell", "start", "level", *INTEGERS, "newest"), rows)
     if gone:
         connection.execute(_DELETE_BUCKET, gone)
     if term.draft.sealed:
@@ -203,14 +204,10 @@ def _write_buckets(connection: Connection, term: _Term, number: int) -> None:
         connection.execute(_SEAL_BUCKET, sealed)
 
 
-def _bucket_row(ids: dict[tuple[str, str], int], counted: CellCounts) -> dict[str, Any]:
+def _bucket_row(ids: dict[tuple[str, str], int], counted: CellCounts) -> tuple[Any, ...]:
     counts = counted.counts
-    row: dict[str, Any] = {name: int(getattr(counts, name)) for name in INTEGERS}
-    row["cell"] = ids[counted.column, counted.value]
-    row["start"] = counted.bucket
-    row["level"] = counted.level
-    row["newest"] = counts.newest
-    return row
+    key = (ids[counted.column, counted.value], counted.bucket, counted.level)
+    return (*key, *integers_of(counts), counts.newest)
 
 
 def _write_verdicts(connection: Connection, entry: Entry, terms: Sequence[_Term], number: int) -> str:

@@ -2,17 +2,21 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
+from operator import attrgetter
 from typing import Any, Final
 
 import numpy as np
 from numpy.typing import NDArray
-from sqlalchemy import Connection, select
+from sqlalchemy import Connection, Select, func, select
 
 from watcher.ledger.tables import BUCKET, CELL
 from watcher.records import INTEGERS, Cell, CellCounts, Counts
 
+_LEVEL: Final = 2
+"""Place of the level among the columns of the table."""
+_PART: Final = 20_000
 NEVER: Final = -1
 """Stands for "none" in the columns of times and look numbers."""
 
@@ -62,6 +66,10 @@ class CountTable:
         return sorted(made, key=lambda c: (c.column, c.value, c.bucket, c.level))
 
 
+integers_of: Final[Callable[[Counts], tuple[int, ...]]] = attrgetter(*INTEGERS)
+"""The nine integers of a record, in the order of `records.INTEGERS`."""
+
+
 def counts_of(integers: Sequence[int], newest: int | None) -> Counts:
     """The record of nine integers in the order of `records.INTEGERS`."""
     predictions, labels, errors, positives, misses, false_alarms, loss_down, loss_up, clusters = integers
@@ -72,33 +80,38 @@ def read_counts(
     connection: Connection, term_id: int, cells: Sequence[tuple[int, Cell]], since: int | None = None
 ) -> CountTable:
     """The cache of a term, buckets starting at or after `since` (None: all)."""
-    statement = (
-        select(BUCKET)
-        .join_from(CELL, BUCKET, BUCKET.c.cell == CELL.c.id)
-        .where(CELL.c.term == term_id)
-        .order_by(BUCKET.c.cell, BUCKET.c.start, BUCKET.c.level)
-    )
+    columns = [func.coalesce(c, NEVER) if c.name in ("newest", "sealed_by") else c for c in BUCKET.c]
+    statement = select(*columns).where(BUCKET.c.cell.in_(select(CELL.c.id).where(CELL.c.term == term_id)))
     if since is not None:
         statement = statement.where(BUCKET.c.start >= since)
-    return _table(connection.execute(statement).fetchall(), cells)
-
-
-def _table(rows: Iterable[Any], cells: Sequence[tuple[int, Cell]]) -> CountTable:
-    columns = list(zip(*rows, strict=True)) or [()] * (5 + len(INTEGERS))
-    ids, starts, levels, *integers, newest, sealed_by = columns
-    order = np.array([i for i, _ in cells], dtype=np.int64)
-    by_id = np.argsort(order)
-    at = by_id[np.searchsorted(order, np.array(ids, dtype=np.int64), sorter=by_id)] if len(order) else by_id
+    numbers, levels = _fetch(connection, statement)
+    ids = np.array([cell_id for cell_id, _ in cells], dtype=np.int64)
+    by_id = np.argsort(ids)
+    place = by_id[np.searchsorted(ids, numbers[:, 0], sorter=by_id)] if len(ids) else numbers[:, 0]
+    # Sorted here: the database would sort by the cell's id, and levels by its own collation.
+    order = np.lexsort((np.array(levels, dtype=np.str_), numbers[:, 1], place))
+    numbers = numbers[order]
     return CountTable(
         cells=tuple(cell for _, cell in cells),
-        cell=at.astype(np.int64),
-        bucket=np.array(starts, dtype=np.int64),
-        level=tuple(levels),
-        integers=np.array(integers, dtype=np.int64).T.reshape(-1, len(INTEGERS)),
-        newest=_optional(newest),
-        sealed_by=_optional(sealed_by),
+        cell=place[order],
+        bucket=numbers[:, 1],
+        level=tuple(map(levels.__getitem__, order.tolist())),
+        integers=numbers[:, 2 : 2 + len(INTEGERS)],
+        newest=numbers[:, -2],
+        sealed_by=numbers[:, -1],
     )
 
 
-def _optional(values: Sequence[int | None]) -> NDArray[np.int64]:
-    return np.array([NEVER if v is None else v for v in values], dtype=np.int64)
+def _fetch(connection: Connection, statement: Select[Any]) -> tuple[NDArray[np.int64], list[str]]:
+    """All columns but the level as integers, and the levels. The driver's own tuples are taken, a part at a time: these
+    columns need no conversion, and 400,000 row objects would be made only to be thrown away.
+    """
+    cursor = connection.execute(statement).cursor
+    assert cursor is not None
+    parts = [np.empty((0, len(BUCKET.c) - 1), dtype=np.int64)]
+    levels: list[str] = []
+    while rows := cursor.fetchmany(_PART):
+        columns = list(zip(*rows, strict=True))
+        levels += columns.pop(_LEVEL)
+        parts.append(np.array(columns, dtype=np.int64).T)
+    return np.concatenate(parts), levels

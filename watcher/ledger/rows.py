@@ -6,7 +6,7 @@ from collections.abc import Sequence
 from datetime import datetime
 from typing import Any
 
-from sqlalchemy import Connection, Table, select, update
+from sqlalchemy import Connection, Table, bindparam, select, update
 from sqlalchemy.dialects import postgresql, sqlite
 
 from watcher.errors import LedgerDamaged
@@ -82,6 +82,29 @@ def upsert(connection: Connection, table: Table, key: Sequence[str], rows: Seque
     statement = dialect.insert(table)
     changed = {name: statement.excluded[name] for name in rows[0] if name not in key}
     connection.execute(statement.on_conflict_do_update(index_elements=list(key), set_=changed), list(rows))
+
+
+def upsert_plain(
+    connection: Connection, table: Table, key: int, names: Sequence[str], rows: Sequence[tuple[Any, ...]]
+) -> None:
+    """`upsert` for many rows of integers and plain text, handed to the driver as they are; the first `key` names are the
+    key. No conversion of the column types takes place.
+    """
+    if not rows:
+        return
+    dialect = postgresql if connection.dialect.name == "postgresql" else sqlite
+    statement = dialect.insert(table).values({name: bindparam(name) for name in names})
+    changed = {name: statement.excluded[name] for name in names[key:]}
+    compiled = statement.on_conflict_do_update(index_elements=names[:key], set_=changed).compile(
+        dialect=connection.dialect
+    )
+    if compiled.positional:
+        order = [names.index(name) for name in compiled.positiontup or ()]
+        same = order == list(range(len(names)))
+        given: Any = list(rows) if same else [tuple(row[i] for i in order) for row in rows]
+    else:
+        given = [dict(zip(names, row, strict=True)) for row in rows]
+    connection.exec_driver_sql(str(compiled), given)
 
 
 def epoch_of(moment: datetime | None) -> int | None:
