@@ -40,7 +40,6 @@ class WebhookTarget:
     secrets: tuple[str, ...] = field(default=(), repr=False)
     timeout: float = 10.0
     ca_file: str | None = None
-    proxy: str | None = field(default=None, repr=False)
 
     def __post_init__(self) -> None:
         parts = urlsplit(self.url)

@@ -50,7 +50,10 @@ class Store(Protocol):
 
 @dataclass(frozen=True, slots=True)
 class Booked:
-    """`Outbox` and `Archive` of a ledger; `message_key` is the ledger's derivation from (ledger id, route, look)."""
+    """`Outbox` and `Archive` of a ledger; `message_key` is the ledger's derivation from (ledger id, route, look).
+
+    It remembers what cannot change, so each thread that sends needs one of its own.
+    """
 
     store: Store
     message_key: Callable[[str, str, int], str]

@@ -37,8 +37,12 @@ class WebhookSender:
             raise ValueError(f"ca_file = {target.ca_file!r}: cannot be used as certificates ({error})") from None
 
     def deliver(self, message: Message) -> Delivery:
-        """Try once; what the receiver and the network do ends in the outcome, never in an exception."""
-        # A coroutine, because only so one deadline covers name look-up, handshake, a dripping header and the body.
+        """Try once; what the receiver and the network do ends in the outcome, never in an exception.
+
+        To be called from a thread without an event loop of its own.
+        """
+        # A coroutine, because only so one deadline covers handshake, a dripping header and the body. A name look-up that
+        # hangs is given up at the deadline, too, but its thread is waited for until the resolver's own time-out.
         return asyncio.run(self._within(message))
 
     async def _within(self, message: Message) -> Delivery:
@@ -60,7 +64,6 @@ class WebhookSender:
             verify=self._context,
             # Not the environment's proxies and .netrc: what leaves this machine is what the configuration says.
             trust_env=False,
-            proxy=target.proxy,
             follow_redirects=False,
             timeout=target.timeout,
         )
