@@ -48,7 +48,7 @@ def test_limits_are_where_the_evidence_reaches_half_the_risk():
     bounds = watcher.confidence_bounds(5000, 150, 0.01)
 
     for limit, side in ((bounds.lower, "above"), (bounds.upper, "below")):
-        assert watcher.evidence(5000, 150, float(limit), side) == pytest.approx(math.log(200), abs=1.1e-6)
+        assert watcher.evidence(5000, 150, float(limit), side) == pytest.approx(math.log(200), abs=1.1e-7)
 
 
 @pytest.mark.parametrize(

@@ -20,7 +20,7 @@ _BLOCK: Final = 65_536
 _ROUNDS: Final = 200
 _NEWTON_ROUNDS: Final = 60
 """After so many rounds the search halves its bracket: Newton's method may crawl where a design is not convex."""
-_TIGHT: Final = 1e-6
+_TIGHT: Final = 1e-7
 """A limit is accepted when its evidence is at most so many nats over the threshold."""
 _GAP: Final = 8.0 * np.finfo(np.float64).eps
 """... or when the bracket is so narrow, relative to the rate."""
