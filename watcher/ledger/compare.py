@@ -14,25 +14,35 @@ TOTAL_SLACK: Final = 2
 RATE_SLACK: Final = 2
 """1e-9."""
 _DECIMAL: Final = re.compile(r"-?\d+\.\d+")
-_RATES: Final = frozenset({"estimate", "life", "recent", "support", "breach", "threshold", "errors", "provisional"})
-"""Times, counts and rates stand side by side in some of these; two seconds of slack in a time forge nothing."""
+_SLACK: Final[Mapping[str, int | tuple[int, ...]]] = {
+    "total": TOTAL_SLACK,
+    "estimate": RATE_SLACK,
+    "threshold": RATE_SLACK,
+    "life": (RATE_SLACK, RATE_SLACK),
+    "recent": (0, 0, 0, RATE_SLACK, RATE_SLACK),
+    "support": (0, 0, RATE_SLACK),
+    "breach": (0, 0, 0, 0, RATE_SLACK),
+    "decide": (1, 1),
+}
+"""For each key of `standing.standing_body` that holds computed figures, place by place; times and counts have none."""
 
 
 def body_differences(stored: Mapping[str, Any], derived: Mapping[str, Any]) -> list[str]:
     """The keys in which two standings (`standing.standing_body`) differ by more than their slack."""
     return [
-        key
-        for key in sorted(set(stored) | set(derived))
-        if not _close(stored.get(key), derived.get(key), _slack(key), tagged=RATE_SLACK)
+        key for key in sorted(set(stored) | set(derived)) if not _same_figure(key, stored.get(key), derived.get(key))
     ]
 
 
-def _slack(key: str) -> int:
-    if key == "total":
-        return TOTAL_SLACK
-    if key == "decide":
-        return 1
-    return RATE_SLACK if key in _RATES else 0
+def _same_figure(key: str, stored: Any, derived: Any) -> bool:
+    slack = _SLACK.get(key, 0)
+    if isinstance(slack, int):
+        return _close(stored, derived, slack, tagged=RATE_SLACK)
+    if stored is None or derived is None:
+        return stored is derived
+    if len(stored) != len(slack) or len(derived) != len(slack):
+        return False
+    return all(_close(a, b, s, tagged=RATE_SLACK) for a, b, s in zip(stored, derived, slack, strict=True))
 
 
 def memory_differences(stored: Mapping[str, Any], derived: Mapping[str, Any]) -> list[str]:
