@@ -175,6 +175,17 @@ def test_the_standings_are_those_of_the_whole_and_of_the_slices_that_are_told_of
     assert slices == [None, {"column": "depot", "value": "Birch"}]
 
 
+def test_where_things_stand_is_told_once_for_several_events_of_one_promise() -> None:
+    """In text and HTML; the JSON repeats it, so that every notice there stands for itself."""
+    memory = Memory()
+    memory.happen(some_event("stale"), 7, 0, T0, "desk")
+    memory.happen(some_event("late-labels", now=3), 7, 1, T0, "desk")
+    message = _write(memory)
+
+    assert (text(message).count("Now: "), html(message).count("Now:")) == (1, 1)
+    assert message.items[0].now == message.items[1].now
+
+
 def test_hostile_slice_values_stay_text_everywhere() -> None:
     """No control character, no markup, no formula, in text, HTML, JSON and CSV."""
     memory = Memory()
