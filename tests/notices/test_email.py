@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import socket
+import threading
 from dataclasses import replace
 from typing import Any
 
@@ -167,6 +168,41 @@ def test_a_relay_on_this_machine_may_be_used_without_tls() -> None:
         delivery = MailSender(target).deliver(some_message())
 
         assert (delivery.outcome, office.encrypted) == ("delivered", [False])
+
+
+def test_a_server_that_speaks_tls_from_the_first_byte_is_reached(certificates: Certificates) -> None:
+    """`security = "tls"`, with the certificate verified and a password."""
+    with post_office(certificates.server, implicit=True) as office:
+        good = _send(office, certificates, security="tls")
+        bad = _send(office, certificates, security="tls", ca_file=certificates.stranger)
+
+        assert (good.outcome, bad.outcome, office.signed_in) == ("delivered", "temporary", [True])
+
+
+def test_a_server_that_greets_with_a_refusal_is_tried_again() -> None:
+    """554 instead of a greeting speaks of the session, not of the message."""
+    with socket.create_server(("127.0.0.1", 0)) as server:
+        thread = threading.Thread(target=_refuse_session, args=(server,), daemon=True)
+        thread.start()
+        target = MailTarget("127.0.0.1", server.getsockname()[1], "w@example.org", ("d@example.org",), timeout=5)
+        delivery = MailSender(target).deliver(some_message())
+        thread.join()
+
+    assert (delivery.outcome, delivery.unreachable) == ("temporary", True)
+    assert "554" in delivery.answer
+
+
+def _refuse_session(server: socket.socket) -> None:
+    connection, _ = server.accept()
+    with connection:
+        connection.sendall(b"554 no service today\r\n")
+        connection.recv(1024)
+
+
+def test_a_missing_ca_file_is_found_at_construction() -> None:
+    """Not at the first breach."""
+    with pytest.raises(ValueError, match="ca_file"):
+        MailSender(MailTarget("h", 25, "a@b", ("c@d",), ca_file="/nowhere/ca.pem"))
 
 
 def test_no_server_is_temporary() -> None:

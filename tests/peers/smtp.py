@@ -65,19 +65,21 @@ class _Controller(Controller):
 
 
 @contextlib.contextmanager
-def post_office(tls: ssl.SSLContext | None, auth: bool = True) -> Iterator[PostOffice]:
-    """Serve until the end of the block; without `tls` it offers no STARTTLS."""
+def post_office(tls: ssl.SSLContext | None, *, implicit: bool = False) -> Iterator[PostOffice]:
+    """Serve until the end of the block; without `tls` it offers no STARTTLS, `implicit` speaks TLS from the first byte."""
     office = PostOffice()
     controller = _Controller(
         office,
         hostname="127.0.0.1",
         port=0,
         server_hostname="localhost",
-        tls_context=tls,
-        require_starttls=tls is not None,
-        authenticator=_authenticate if auth and tls else None,
-        auth_required=auth and tls is not None,
-        auth_require_tls=True,
+        ssl_context=tls if implicit else None,
+        tls_context=None if implicit else tls,
+        require_starttls=tls is not None and not implicit,
+        authenticator=_authenticate if tls else None,
+        auth_required=tls is not None and not implicit,
+        # On a port of implicit TLS the package does not see that the line is encrypted: AUTH is offered, not required.
+        auth_require_tls=not implicit,
     )
     controller.start()
     try:
