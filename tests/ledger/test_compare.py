@@ -96,8 +96,8 @@ def test_anything_else_that_differs_is_named(key: str, value: Any) -> None:
     assert body_differences(BODY, {k: v for k, v in BODY.items() if k != key}) == [key]
 
 
-def test_memories_are_compared_exactly_but_for_micro_nats() -> None:
-    """Only keys that end in _micronats may differ, by 2; also inside nested mappings."""
+def test_memories_are_compared_exactly_but_for_computed_figures() -> None:
+    """Keys that end in _micronats may differ by 2 and decimal text by 2e-6, also inside nested mappings; nothing else."""
     memory = {
         "number": 1,
         "top_micronats": 500,

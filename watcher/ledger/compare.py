@@ -13,7 +13,7 @@ TOTAL_SLACK: Final = 2
 """Micro-nats."""
 RATE_SLACK: Final = 2
 """1e-9."""
-_DECIMAL: Final = re.compile(r"-?\d+\.\d+")
+_DECIMAL: Final = re.compile(r"-?\d+(\.\d+(e-?\d+)?|e-?\d+)")
 _SLACK: Final[Mapping[str, int | tuple[int, ...]]] = {
     "total": TOTAL_SLACK,
     "estimate": RATE_SLACK,

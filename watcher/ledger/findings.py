@@ -53,7 +53,7 @@ class Replayed:
 
     standings: tuple[Standing, ...]
     memories: tuple[Mapping[str, Any], ...]
-    """Beside each standing. Keys that end in `_micronats` may differ by 2 from the stored ones, all others not at all."""
+    """Beside each standing. Keys that end in `_micronats` may differ by 2 from the stored ones, decimal text by 2e-6, all others not at all."""
     events: tuple[Event, ...]
 
 
