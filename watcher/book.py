@@ -6,10 +6,10 @@ from collections.abc import Iterable, Mapping, Sequence
 from itertools import pairwise
 
 from watcher.bounds.parts import declared_parts, discovered_part, part_of_whole
-from watcher.buckets import bucket_starts
-from watcher.path import NOTHING, Levels, add, path, total
+from watcher.buckets import bucket_end, bucket_starts
+from watcher.judging import Book, Key, Memory
+from watcher.path import NOTHING, Levels, add, entered, path, total
 from watcher.records import Cell, CellCounts, Counts, Terms
-from watcher.verdict import Book, Key, Memory
 
 Table = dict[Key, dict[int, dict[str, Counts]]]
 """Counts by cell, bucket and level."""
@@ -71,14 +71,20 @@ def build(
     before: int,
     until: int,
     memories: Mapping[Key, Memory],
+    previous: Mapping[Key, Mapping[int, Levels]] | None = None,
 ) -> Book:
-    """The book of a promise version whose buckets below `until` are counted, those from `before` on for the first time."""
-    starts = tuple(s for s in bucket_starts(terms.released, until, terms.bucket, terms.time_zone) if s < until)
+    """The book of a promise version: buckets below `until` are sealed, those from `before` on in this look.
+
+    `previous`: the counts as of the look before; arriving labels need them, sealed counting does not. None: as now.
+    """
+    arriving = terms.count == "arriving"
+    end = _newest_counted(terms, counts) if arriving else until
+    starts = tuple(s for s in bucket_starts(terms.released, end, terms.bucket, terms.time_zone) if s < end)
     provisional = {}
     for key, buckets in counts.items():
         waiting = NOTHING
         for start, levels in buckets.items():
-            if start >= until:
+            if start >= end:
                 waiting = add(waiting, total(levels))
         provisional[key] = waiting
     ordered = tuple(sorted(cells, key=lambda cell: cell.key))
@@ -87,9 +93,31 @@ def build(
         digest=digest,
         cells=ordered,
         starts=starts,
-        end=until,
+        end=end,
         fresh=sum(start < before for start in starts),
         paths={cell.key: path(terms, starts, counts.get(cell.key, {})) for cell in ordered},
         provisional=provisional,
         memories=memories,
+        before=_pairs(terms, counts if previous is None else previous) if arriving else {},
+        sealed=tuple(start for start in starts if before <= start < until),
+        sealed_until=until,
     )
+
+
+def _newest_counted(terms: Terms, counts: Mapping[Key, Mapping[int, Levels]]) -> int:
+    """End of the newest bucket in which anything of the measure was labelled; `released` while there is none."""
+    whole = counts.get(("", ""), {})
+    newest = max((start for start, levels in whole.items() if entered(terms, total(levels))[0]), default=None)
+    return terms.released if newest is None else bucket_end(newest, terms.bucket, terms.time_zone)
+
+
+def _pairs(terms: Terms, counts: Mapping[Key, Mapping[int, Levels]]) -> dict[Key, dict[int, tuple[int, int]]]:
+    """Labels and errors of the measure by cell and bucket, where there are labels."""
+    found: dict[Key, dict[int, tuple[int, int]]] = {}
+    for key, buckets in counts.items():
+        inner = found.setdefault(key, {})
+        for start, levels in buckets.items():
+            n, k = entered(terms, total(levels))
+            if n:
+                inner[start] = (n, int(k))
+    return found

@@ -12,12 +12,13 @@ from watcher.book import first_cells
 from watcher.bounds import windows
 from watcher.bounds.exact import exact_upper
 from watcher.errors import SettingsError, UsageError, WatcherError
+from watcher.judging import threshold
 from watcher.look import Watched, question, recognise
 from watcher.records import Tally, Terms
 from watcher.settings import PromiseTable, Settings, SourceTable, duration
 from watcher.sources.base import Source, Survey
 from watcher.text import safe
-from watcher.verdict import moment, threshold
+from watcher.verdict import moment
 
 
 @dataclass(frozen=True, slots=True)

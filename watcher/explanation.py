@@ -12,8 +12,9 @@ from watcher.bounds import windows
 from watcher.bounds.evidence import evidence
 from watcher.bounds.mixture import LIFE, RESTART
 from watcher.bounds.noise import breach_rate, support_rate
+from watcher.judging import Book, Key, threshold
 from watcher.path import CellPath, design_of, entered
-from watcher.verdict import Book, Key, moment, threshold
+from watcher.verdict import moment
 
 
 @dataclass(frozen=True, slots=True)

@@ -314,7 +314,7 @@ def _judge(ledger: Ledger, source: Source, known: _Known, asked: Question, tally
     )
     digest = known.stored.digest if known.stored else terms_digest(terms)
     merged = _merge(stored, fresh, before)
-    verdict = advance(build(terms, digest, cells, merged, before, until, memories), now, remarks)
+    verdict = advance(build(terms, digest, cells, merged, before, until, memories, stored), now, remarks)
     verdict = replace(verdict, standings=diagnose(terms, merged, until, now, verdict.standings))
     known_rejects = ledger.rejects(terms.promise)[0] if known.stored else {}
     events = [*_own_events(known, stored, fresh, previous, tally, known_rejects), *verdict.events]

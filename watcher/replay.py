@@ -10,11 +10,12 @@ from watcher.book import Table, build
 from watcher.bounds import METHOD
 from watcher.diagnosis import diagnose
 from watcher.errors import UsageError
+from watcher.judging import Book, Key
 from watcher.ledger.audit import Replayed, audit
 from watcher.ledger.store import Ledger
 from watcher.ledger.terms import terms_digest
 from watcher.records import Cell, Entry, Event, Standing, TermDraft, Terms
-from watcher.verdict import Book, Key, advance
+from watcher.verdict import advance
 
 DERIVED: Final = frozenset(
     {
@@ -55,8 +56,17 @@ class _State:
             self.counts.setdefault((row.column, row.value), {}).setdefault(row.bucket, {})[row.level] = row.counts
         return before
 
-    def book(self, before: int) -> Book:
-        return build(self.terms, self.digest, self.cells, self.counts, before, self.sealed_until, self.memories)
+    def pairs(self) -> Table | None:
+        """The counts as they are now, kept apart from what a draft changes; None where nobody needs them."""
+        if self.terms.count != "arriving":
+            return None
+        return {key: {start: dict(levels) for start, levels in b.items()} for key, b in self.counts.items()}
+
+    def book(self, before: int, previous: Table | None = None) -> Book:
+        """The book after the newest draft."""
+        return build(
+            self.terms, self.digest, self.cells, self.counts, before, self.sealed_until, self.memories, previous
+        )
 
 
 class Replay:
@@ -97,8 +107,9 @@ class Replay:
         events: list[Event] = []
         for draft in self._open(entry):
             state = self._state(draft)
+            previous = state.pairs()
             before = state.apply(draft)
-            verdict = advance(state.book(before), entry.at, draft.remarks)
+            verdict = advance(state.book(before, previous), entry.at, draft.remarks)
             judged = diagnose(state.terms, state.counts, state.sealed_until, entry.at, verdict.standings)
             state.memories = {(s.column, s.value): m for s, m in zip(judged, verdict.memories, strict=True)}
             standings += judged

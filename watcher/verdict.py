@@ -11,19 +11,16 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from datetime import UTC, datetime
-from fractions import Fraction
 from typing import Any
 
 import numpy as np
-import numpy.typing as npt
 
 from watcher.bounds import windows
 from watcher.bounds.deciding import labels_to_decide
-from watcher.bounds.noise import breach_rate, support_rate, true_limits
-from watcher.bounds.run_length import Warning as Warned
-from watcher.bounds.run_length import walk_warnings
+from watcher.bounds.noise import true_limits
+from watcher.judging import Book, Judged, Memory, judge
 from watcher.path import CellPath, add, design_of, entered, estimate
 from watcher.records import (
     Breach,
@@ -42,29 +39,6 @@ from watcher.records import (
 
 RECENT = 28 * 86400
 """Seconds of the `recent` window."""
-Memory = Mapping[str, Any]
-Key = tuple[str, str]
-
-
-@dataclass(frozen=True, slots=True)
-class Book:
-    """Everything that is known of one promise version when it is judged."""
-
-    terms: Terms
-    digest: str
-    """Of the terms."""
-    cells: tuple[Cell, ...]
-    """The whole first."""
-    starts: tuple[int, ...]
-    """Every counted bucket since the release, epoch seconds, ascending; the last ones new in this look."""
-    end: int
-    """End of the newest counted bucket; `released` while there is none."""
-    fresh: int
-    """How many of `starts` were counted before this look; those from there on are judged now."""
-    paths: Mapping[Key, CellPath]
-    provisional: Mapping[Key, Counts]
-    """Counts of the open buckets."""
-    memories: Mapping[Key, Memory]
 
 
 @dataclass(frozen=True, slots=True)
@@ -74,28 +48,6 @@ class Verdict:
     standings: tuple[Standing, ...]
     memories: tuple[Memory, ...]
     events: tuple[Event, ...]
-
-
-@dataclass(frozen=True, slots=True)
-class _Judged:
-    """One cell after its new buckets, before the limits that people are shown."""
-
-    cell: Cell
-    risk: float
-    threshold: float
-    total: float
-    crossing: tuple[int, windows.Crossing] | None
-    """Position of the bucket at which the total crossed in this look."""
-    supports: npt.NDArray[np.int64]
-    """For each new bucket the shortest supporting window, -1 for none; before any new bucket the last known one."""
-    warning: Warned
-    warned: tuple[tuple[int, str], ...] = field(default=())
-
-
-def threshold(risk: float, part: Fraction) -> tuple[float, float]:
-    """The risk of a cell rounded down and its threshold log(1/risk) in nats rounded up."""
-    own = float(np.nextafter(float(Fraction(risk) * part), 0.0))
-    return own, float(np.nextafter(-math.log(own), np.inf))
 
 
 def moment(epoch: int) -> datetime:
@@ -108,7 +60,7 @@ def advance(book: Book, now: int, remarks: Remarks) -> Verdict:
 
     Depends on nothing but its arguments; one call over a year says what daily calls would have said.
     """
-    judged = [_judge(book, cell) for cell in book.cells]
+    judged = [judge(book, cell, now) for cell in book.cells]
     number, opened = _numbers(book, judged)
     limits = _limits(book, judged)
     standings, memories, events = [], [], []
@@ -121,81 +73,21 @@ def advance(book: Book, now: int, remarks: Remarks) -> Verdict:
     return Verdict(tuple(standings), tuple(memories), tuple(events))
 
 
-def _ends(book: Book) -> npt.NDArray[np.int64]:
-    return np.array([*book.starts[1:], book.end], dtype=np.int64) if book.starts else np.zeros(0, dtype=np.int64)
-
-
-def _judge(book: Book, cell: Cell) -> _Judged:
-    terms, memory = book.terms, book.memories.get(cell.key, {})
-    own, bar = threshold(terms.risk, cell.part)
-    design, buckets = design_of(terms), book.paths[cell.key].statistics
-    restarts = windows.restarts(terms.service_life, terms.bucket)
-    starts, ends = np.array(book.starts, dtype=np.int64), _ends(book)
-    count, since = len(starts), book.fresh
-    if since == count:
-        last = memory.get("support")
-        kept = np.array([-1 if last is None else last], dtype=np.int64)
-        return _Judged(cell, own, bar, _recorded(memory), None, kept, _warning_of(memory))
-    ages = ends[since:, None] - starts[None, :]
-    mature = None if terms.window_at_least is None else ages >= terms.window_at_least
-    above = breach_rate(terms.tolerance, terms.label_noise)
-    totals = windows.totals(buckets, above, restarts, since=since, design=design, mature=mature)
-    crossing = None
-    if memory.get("breach") is None and (over := np.flatnonzero(totals >= bar)).size:
-        at = since + int(over[0])
-        young = None if mature is None else mature[at - since, : at + 1]
-        tails = _tails(buckets, at)
-        crossing = (at, windows.crossing(tails, above, bar, restarts, design=design, mature=young))
-    supports = windows.supports(
-        buckets,
-        support_rate(terms.tolerance, terms.label_noise),
-        own,
-        restarts,
-        since=since,
-        long_enough=ages >= terms.support_at_least,
-        design=design,
-    )
-    warning, warned = _warn(book, buckets, memory)
-    return _Judged(cell, own, bar, float(totals[-1]), crossing, supports, warning, warned)
-
-
-def _tails(buckets: npt.NDArray[np.int64], at: int) -> npt.NDArray[np.int64]:
-    """The statistic of every window that ends with bucket `at`, in order of its restart."""
-    return np.ascontiguousarray(buckets[: at + 1][::-1].cumsum(axis=0)[::-1])
-
-
-def _recorded(memory: Memory) -> float:
-    return int(memory.get("total_micronats", 0)) / 1e6
-
-
-def _warning_of(memory: Memory) -> Warned:
-    return Warned(**memory["warning"]) if "warning" in memory else Warned()
-
-
-def _warn(book: Book, buckets: npt.NDArray[np.int64], memory: Memory) -> tuple[Warned, tuple[tuple[int, str], ...]]:
-    terms = book.terms
-    mean_run = max(2.0, terms.warn_every / terms.bucket)
-    return walk_warnings(
-        _warning_of(memory),
-        buckets,
-        book.fresh,
-        _ends(book),
-        breach_rate(terms.tolerance, terms.label_noise),
-        math.log(mean_run),
-        design=design_of(terms),
-    )
-
-
-def _numbers(book: Book, judged: Sequence[_Judged]) -> tuple[int, int]:
+def _numbers(book: Book, judged: Sequence[Judged]) -> tuple[int, int]:
     """The number of the breach that new crossings join or open, and how many were ever opened."""
-    opened = max((int(m.get("breaches", 0)) for m in book.memories.values()), default=0)
-    standing = [m["breach"]["number"] for m in book.memories.values() if m.get("breach")]
+    memories = [book.memories.get(each.cell.key, {}) for each in judged]
+    opened = max((int(memory.get("breaches", 0)) for memory in memories), default=0)
+    standing = [
+        memory["breach"]["number"]
+        for each, memory in zip(judged, memories, strict=True)
+        if memory.get("breach") and not each.withdrawn
+    ]
     number = max(standing) if standing else opened + 1
     crossed = any(each.crossing for each in judged)
     return number, max(opened, number) if crossed or standing else opened
 
 
-def _limits(book: Book, judged: Sequence[_Judged]) -> list[tuple[Interval, Recent | None]]:
+def _limits(book: Book, judged: Sequence[Judged]) -> list[tuple[Interval, Recent | None]]:
     terms, design = book.terms, design_of(book.terms)
     if not book.starts:
         return [(Interval(0.0, 1.0), None)] * len(judged)
@@ -221,7 +113,7 @@ def _limits(book: Book, judged: Sequence[_Judged]) -> list[tuple[Interval, Recen
 
 
 def _stand(
-    book: Book, judged: _Judged, life: Interval, recent: Recent | None, now: int, remarks: Remarks, number: int
+    book: Book, judged: Judged, life: Interval, recent: Recent | None, now: int, remarks: Remarks, number: int
 ) -> tuple[Standing, dict[str, Any], list[Event]]:
     terms, cell = book.terms, judged.cell
     memory, path = book.memories.get(cell.key, {}), book.paths[cell.key]
@@ -231,7 +123,7 @@ def _stand(
     breach, events = _breach(book, judged, now, number)
     support, trail = _support(book, judged, breach, stale)
     events += trail
-    events += [_event(book, cell, kind, t, {}) for t, kind in judged.warned]
+    events += [_event(book, cell, each.kind, each.bucket, {}) for each in judged.trail if each.kind is not None]
     if cell.column == "" and stale != bool(memory.get("stale", False)):
         facts = {"newest_label": None if newest is None else moment(newest).isoformat()}
         events.append(_event(book, cell, "stale" if stale else "labels-resumed", None, facts))
@@ -241,6 +133,7 @@ def _stand(
     flags = {
         "warning": judged.warning.standing,
         "stale": stale,
+        "delay-depends-on-outcome": judged.depends,
         "unlisted": remarks.unlisted,
         "uncertified": remarks.uncertified,
     }
@@ -282,8 +175,11 @@ def _event(book: Book, cell: Cell, kind: str, bucket: int | None, facts: Mapping
     return Event(kind, terms.promise, terms.version, cell.column, cell.value, start, facts)
 
 
-def _breach(book: Book, judged: _Judged, now: int, number: int) -> tuple[Breach | None, list[Event]]:
+def _breach(book: Book, judged: Judged, now: int, number: int) -> tuple[Breach | None, list[Event]]:
     known = book.memories.get(judged.cell.key, {}).get("breach")
+    if known and judged.withdrawn:
+        facts = {"number": known["number"], "noticed": moment(known["noticed"]).isoformat()}
+        return None, [_event(book, judged.cell, "breach-withdrawn", None, facts)]
     if known:
         return (
             Breach(
@@ -298,9 +194,9 @@ def _breach(book: Book, judged: _Judged, now: int, number: int) -> tuple[Breach 
     if judged.crossing is None:
         return None, []
     at, crossing = judged.crossing
-    ends, path, j = _ends(book), book.paths[judged.cell.key], crossing.likeliest
+    ends, path, j = book.ends, book.paths[judged.cell.key], crossing.likeliest
     window = CellPath(path.statistics[j : at + 1], path.counts[j : at + 1]).sum
-    labels, errors = entered(book.terms, window)
+    labels, errors = judged.window or entered(book.terms, window)
     lower = crossing.lower
     if book.terms.label_noise is not None:
         lower = max(true_limits(lower, 1.0, book.terms.label_noise)[0], book.terms.tolerance)
@@ -317,21 +213,19 @@ def _breach(book: Book, judged: _Judged, now: int, number: int) -> tuple[Breach 
     return breach, [_event(book, judged.cell, "breach", at, facts)]
 
 
-def _support(book: Book, judged: _Judged, breach: Breach | None, stale: bool) -> tuple[Support | None, list[Event]]:
+def _support(book: Book, judged: Judged, breach: Breach | None, stale: bool) -> tuple[Support | None, list[Event]]:
     """The support that stands now, and every change of it in bucket order."""
     events, memory = [], book.memories.get(judged.cell.key, {})
-    was = bool(memory.get("supported", False))
-    stop = judged.crossing[0] if judged.crossing else -1 if memory.get("breach") else len(book.starts)
-    warned = dict(judged.warned)
-    standing = _warning_of(memory).standing
-    for offset, t in enumerate(range(book.fresh, len(book.starts))):
-        standing = {"warning": True, "warning-over": False}.get(warned.get(t, ""), standing)
-        is_now = bool(judged.supports[offset] >= 0) and t < stop and not standing
+    was, standing, broken = bool(memory.get("supported", False)), judged.warned_before, bool(memory.get("breach"))
+    for moment_ in judged.trail:
+        standing = {"warning": True, "warning-over": False}.get(moment_.kind or "", standing)
+        broken = (broken and not judged.withdrawn) or moment_.crossed
+        is_now = moment_.window >= 0 and not broken and not standing
         if is_now != was:
-            facts = _window_facts(book, int(judged.supports[offset])) if is_now else {}
-            events.append(_event(book, judged.cell, "supported" if is_now else "support-lost", t, facts))
+            facts = _window_facts(book, moment_.window) if is_now else {}
+            events.append(_event(book, judged.cell, "supported" if is_now else "support-lost", moment_.bucket, facts))
         was = is_now
-    window = int(judged.supports[-1])
+    window = judged.support
     holds = breach is None and window >= 0 and not judged.warning.standing and not stale
     if was and not holds:
         events.append(_event(book, judged.cell, "support-lost", None, {"because": "stale"}))
@@ -346,7 +240,7 @@ def _window_facts(book: Book, window: int) -> dict[str, Any]:
     return {"since": moment(book.starts[window]).isoformat(), "window": window}
 
 
-def _shown_support(book: Book, judged: _Judged, window: int) -> Support:
+def _shown_support(book: Book, judged: Judged, window: int) -> Support:
     terms, statistics = book.terms, book.paths[judged.cell.key].statistics[window:].sum(axis=0)
     restarts = windows.restarts(terms.service_life, terms.bucket)
     _, upper = windows.window_limits(
@@ -356,7 +250,7 @@ def _shown_support(book: Book, judged: _Judged, window: int) -> Support:
     return Support(moment(book.starts[window]), moment(book.end), min(shown, terms.tolerance))
 
 
-def _to_decide(terms: Terms, judged: _Judged, path: CellPath) -> ToDecide | None:
+def _to_decide(terms: Terms, judged: Judged, path: CellPath) -> ToDecide | None:
     """Only where one label is one trial of section 1; other designs have no such figure."""
     if (
         terms.measure == "loss"
@@ -370,7 +264,7 @@ def _to_decide(terms: Terms, judged: _Judged, path: CellPath) -> ToDecide | None
     return ToDecide(*labels_to_decide(n, k, terms.tolerance, judged.risk))
 
 
-def _remember(judged: _Judged, breach: Breach | None, support: Support | None, stale: bool) -> dict[str, Any]:
+def _remember(judged: Judged, breach: Breach | None, support: Support | None, stale: bool) -> dict[str, Any]:
     known = None
     if breach:
         known = {
@@ -385,7 +279,8 @@ def _remember(judged: _Judged, breach: Breach | None, support: Support | None, s
         "total_micronats": math.floor(judged.total * 1e6 + 0.5),
         "breach": known,
         "supported": support is not None,
-        "support": int(judged.supports[-1]),
+        "support": judged.support,
         "stale": stale,
         "warning": {name: getattr(warning, name) for name in warning.__dataclass_fields__},
+        **judged.memory,
     }

@@ -17,10 +17,10 @@ from watcher.cli.common import CONFIG, JSON, print_json
 from watcher.errors import UsageError
 from watcher.explanation import Explanation, Window
 from watcher.explanation import explain as lay_open
+from watcher.judging import Book
 from watcher.ledger.store import Ledger
 from watcher.replay import Replay
 from watcher.text import safe
-from watcher.verdict import Book
 
 
 @click.command()
