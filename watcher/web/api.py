@@ -47,12 +47,24 @@ def _csv_too() -> dict[int | str, dict[str, Any]]:
 def router(app: FastAPI, site: Site, access: Access, board: Board) -> APIRouter:
     """Everything below /api/v1."""
     made = APIRouter(dependencies=[Security(BEARER)], responses=_problems(404, 405))
-    reader, actor = Depends(access.reader), Depends(access.actor)
+    reader = Depends(access.reader)
 
     @made.get("/openapi.json", include_in_schema=False)
     def document(visitor: Annotated[Visitor, reader]) -> Response:
         del visitor
         return JSONResponse(openapi(app))
+
+    _standing_routes(made, site, access, board)
+    _history_routes(made, site, access)
+    _happening_routes(made, site, access)
+    _archive_routes(made, site, access)
+    _acting_routes(made, site, access)
+    return made
+
+
+def _standing_routes(made: APIRouter, site: Site, access: Access, board: Board) -> None:
+    """Where promises stand."""
+    reader = Depends(access.reader)
 
     @made.get("/promises", response_model=schema.Promises, responses=_csv_too())
     def promises(
@@ -92,6 +104,11 @@ def router(app: FastAPI, site: Site, access: Access, board: Board) -> APIRouter:
             "whole": standing(whole),
             "slices": [row for row in rows if row["slice"] is not None],
         }
+
+
+def _history_routes(made: APIRouter, site: Site, access: Access) -> None:
+    """How they came there, by day."""
+    reader = Depends(access.reader)
 
     @made.get("/promises/{name}/{version}/history", response_model=schema.History, responses=_csv_too())
     def history(
@@ -160,18 +177,10 @@ def router(app: FastAPI, site: Site, access: Access, board: Board) -> APIRouter:
             return charts.labels(reading.day_counts(ledger, stored, cell.key, rows), **drawn)
         return (charts.bounds if chart == "bounds" else charts.total)(rows, stored.terms, **drawn)
 
-    @made.get("/promises/{name}/rejects", response_model=schema.Rejects, responses=_csv_too())
-    def rejects(visitor: Annotated[Visitor, actor], name: Name, format: Form = "json") -> Any:  # noqa: A002
-        """Rows that the newest look could not use; needs the role act, because raw rows may hold personal data."""
-        del visitor
-        ledger, wanted = site.ledger(), from_segment(name)
-        if all(each.terms.promise != wanted for each in ledger.terms(open_only=False)):
-            raise Refused(404, "no-such-promise", "There is no promise of this name in the ledger.")
-        found, samples = ledger.rejects(wanted)
-        rows = [
-            {"reason": r.reason, "file": r.file, "line": r.line, "id": r.id, "values": dict(r.values)} for r in samples
-        ]
-        return csv_answer(rows, "rejects") if format == "csv" else {"counts": found, "samples": rows}
+
+def _happening_routes(made: APIRouter, site: Site, access: Access) -> None:
+    """What happened."""
+    reader = Depends(access.reader)
 
     @made.get("/events", response_model=schema.Events, responses=_csv_too())
     def events(
@@ -220,6 +229,11 @@ def router(app: FastAPI, site: Site, access: Access, board: Board) -> APIRouter:
         ]
         return csv_answer(rows, "sources") if format == "csv" else {"sources": rows}
 
+
+def _archive_routes(made: APIRouter, site: Site, access: Access) -> None:
+    """Weekly reports."""
+    reader = Depends(access.reader)
+
     @made.get("/reports", response_model=schema.Reports, responses=_csv_too())
     def reports(visitor: Annotated[Visitor, reader], format: Form = "json") -> Any:  # noqa: A002
         """The archive of weekly reports, newest first."""
@@ -254,14 +268,30 @@ def router(app: FastAPI, site: Site, access: Access, board: Board) -> APIRouter:
         del visitor
         return stored_file(request, site.ledger(), week, revision, file)
 
+
+def _acting_routes(made: APIRouter, site: Site, access: Access) -> None:
+    """What needs the role act."""
+    actor = Depends(access.actor)
+
+    @made.get("/promises/{name}/rejects", response_model=schema.Rejects, responses=_csv_too())
+    def rejects(visitor: Annotated[Visitor, actor], name: Name, format: Form = "json") -> Any:  # noqa: A002
+        """Rows that the newest look could not use; needs the role act, because raw rows may hold personal data."""
+        del visitor
+        ledger, wanted = site.ledger(), from_segment(name)
+        if all(each.terms.promise != wanted for each in ledger.terms(open_only=False)):
+            raise Refused(404, "no-such-promise", "There is no promise of this name in the ledger.")
+        found, samples = ledger.rejects(wanted)
+        rows = [
+            {"reason": r.reason, "file": r.file, "line": r.line, "id": r.id, "values": dict(r.values)} for r in samples
+        ]
+        return csv_answer(rows, "rejects") if format == "csv" else {"counts": found, "samples": rows}
+
     @made.post("/acknowledgements", response_model=schema.Acknowledged, status_code=201, responses=_problems(404, 409))
     def acknowledge(visitor: Annotated[Visitor, actor], body: schema.Acknowledge) -> Any:
         """Acknowledge a breach; recorded with the name of the token. Needs the role act."""
         reading.find_term(site.ledger(), body.promise, body.version)
         head = access.acknowledge(visitor, body.promise, body.version, body.breach, body.why.strip())
         return {"look": head.look, "head": head.digest, "who": visitor.name}
-
-    return made
 
 
 def openapi(app: FastAPI) -> dict[str, Any]:

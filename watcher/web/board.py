@@ -61,7 +61,7 @@ def row_of(found: PromiseOverview) -> Row:
     return Row(
         whole=whole,
         terms=terms,
-        headline=headline(whole, terms),
+        headline=_headline(whole, terms, in_part=rank == 1 and bool(found.broken)),
         broken=tuple(_cell(*key) for key in found.broken),
         warned=tuple(_cell(*key) for key in found.warned),
         flags=tuple(plain.FLAGS[flag] for flag in whole.flags),
@@ -72,9 +72,9 @@ def row_of(found: PromiseOverview) -> Row:
     )
 
 
-def headline(whole: Standing, terms: Terms) -> str:
+def _headline(whole: Standing, terms: Terms, *, in_part: bool) -> str:
     """The state in a few words, as a sentence."""
-    text = wording.headline(whole, terms)
+    text = ("as a whole " if in_part else "") + wording.headline(whole, terms)
     return text[0].upper() + text[1:] + "."
 
 
@@ -142,10 +142,9 @@ def router(site: Site, access: Access, board: Board, gallery: Gallery) -> APIRou
     def one_slice(
         request: Request, visitor: Annotated[Visitor, reader], name: str, version: str, cell: str
     ) -> Response:
-        del visitor
         ledger = site.ledger()
         stored = reading.find_term(ledger, from_segment(name), from_segment(version))
-        return page(request, "slice.html", _slice(parts, ledger, stored, cell))
+        return page(request, "slice.html", _slice(parts, ledger, stored, cell, visitor))
 
     @made.post("/promises/{name}/{version}/acknowledge")
     def acknowledge(
@@ -194,7 +193,7 @@ def _promise(parts: _Parts, ledger: Ledger, stored: StoredTerm, visitor: Visitor
     rejected, _ = ledger.rejects(terms.promise)
     unit = parts.unit(terms)
     return {
-        **_common(parts, stored, whole, unit),
+        **_common(stored, whole, unit),
         "figures": figures.figures(parts.gallery, ledger, stored, ("", ""), rows),
         "slices": [(each, slice_id(each.column, each.value)) for each in slices],
         "multiples": figures.multiples(parts.gallery, ledger, stored, slices) if slices else None,
@@ -207,6 +206,7 @@ def _promise(parts: _Parts, ledger: Ledger, stored: StoredTerm, visitor: Visitor
         "budget_sentence": wording.budgets(terms),
         "term_rows": plain.term_rows(terms),
         "steps": _steps(whole, slices, terms),
+        "in_part": whole.state != "breached" and any(each.state == "breached" for each in slices),
         "others": [
             (each.terms.version, promise_path(each.terms.promise, each.terms.version))
             for each in ledger.terms(open_only=False)
@@ -223,7 +223,7 @@ def _steps(whole: Standing, slices: Sequence[Standing], terms: Terms) -> list[st
     return list(steps)
 
 
-def _common(parts: _Parts, stored: StoredTerm, standing: Standing, unit: str) -> dict[str, Any]:
+def _common(stored: StoredTerm, standing: Standing, unit: str) -> dict[str, Any]:
     terms = stored.terms
     return {
         "terms": terms,
@@ -239,7 +239,7 @@ def _common(parts: _Parts, stored: StoredTerm, standing: Standing, unit: str) ->
     }
 
 
-def _slice(parts: _Parts, ledger: Ledger, stored: StoredTerm, cell_id: str) -> Mapping[str, Any]:
+def _slice(parts: _Parts, ledger: Ledger, stored: StoredTerm, cell_id: str, visitor: Visitor) -> Mapping[str, Any]:
     terms = stored.terms
     cell = reading.find_cell(ledger.cells(stored.id), cell_id)
     rows = reading.history(ledger, terms, cell.key)
@@ -247,11 +247,11 @@ def _slice(parts: _Parts, ledger: Ledger, stored: StoredTerm, cell_id: str) -> M
         raise Refused(404, "nothing-yet", "This slice has no verdict yet.")
     standing = rows[-1].standing
     return {
-        **_common(parts, stored, standing, parts.unit(terms)),
+        **_common(stored, standing, parts.unit(terms)),
         "cell": _cell(cell.column, cell.value),
         "figures": figures.figures(parts.gallery, ledger, stored, cell.key, rows),
         "events": told(ledger, reading.events_of(ledger, terms, 400, cell.key), terms),
-        "may_act": False,
+        "may_act": visitor.acts,
         "cells": plain.parts([cell], terms, {cell.key: standing.threshold}),
         "steps": list(wording.next_steps(standing, terms)),
         "budget_sentence": wording.budgets(terms),

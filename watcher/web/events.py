@@ -34,6 +34,7 @@ def told(ledger: Ledger, found: Sequence[StoredEvent], terms: Terms | None = Non
                 "look": each.look,
                 "n": each.n,
                 "at": each.at,
+                "promise": each.event.promise,
                 "kind": each.event.kind,
                 "sentence": wording.event_sentence(each.event, of),
                 "acknowledged_by": each.acknowledged_by,
@@ -77,7 +78,7 @@ def router(site: Site, access: Access) -> APIRouter:
 
 
 def place(text: str) -> tuple[int, int] | None:
-    """ "LOOK-N" as the place of an event; empty: None. Raises Refused (422)."""
+    """The place of an event written as LOOK-N; empty: None. Raises Refused (422)."""
     if not text:
         return None
     look, _, n = text.partition("-")

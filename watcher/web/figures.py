@@ -76,7 +76,7 @@ def _total(gallery: Gallery, stored: StoredTerm, key: Key, rows: tuple[DayStandi
 
     return _figure(
         gallery, stored, key, rows, "total", "Evidence against the promise",
-        "The total of all windows, in nats (natural logarithm of the odds that a bet against the promise has won); "
+        "The total of all windows, in nats: the natural logarithm of what betting against the promise would have made of one coin; "
         "the promise is broken when it reaches the dashed threshold.",
         ("counted up to", "labels", "total", "threshold"), line, lambda: charts.total(rows, stored.terms),
     )  # fmt: skip

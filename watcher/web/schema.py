@@ -5,7 +5,7 @@ Rates are fractions, evidence is in nats, times are RFC 3339 in UTC. A number th
 
 from __future__ import annotations
 
-from typing import Any, Literal
+from typing import Any
 
 from pydantic import BaseModel, Field
 
@@ -261,9 +261,3 @@ class Problem(BaseModel):
     status: int
     detail: str
     errors: list[ProblemError] | None = None
-
-
-class ChartName(BaseModel):
-    """Charts that a page can draw by itself."""
-
-    chart: Literal["bounds", "total", "labels"]

@@ -36,6 +36,12 @@ def _day(at: datetime, zone: str = "UTC") -> Markup:
     return Markup('<time datetime="{}">{}</time>').format(rfc3339(at), wording.day(at, zone))
 
 
+def _code(text: str) -> Markup:
+    # Sentences quote commands and keys as `watcher explain`.
+    pieces = safe(text, None).split("`")
+    return Markup("").join(Markup("<code>{}</code>").format(p) if i % 2 else p for i, p in enumerate(pieces))
+
+
 def _environment() -> Environment:
     made = Environment(
         loader=FileSystemLoader(FOLDER),
@@ -48,6 +54,7 @@ def _environment() -> Environment:
     made.filters["outside"] = safe
     made.filters["time"] = _time
     made.filters["day"] = _day
+    made.filters["code"] = _code
     made.globals.update(
         say=wording, states=STATES, flag_names=FLAGS, promise_path=promise_path, slice_path=slice_path, version=""
     )
