@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from datetime import UTC, datetime
+from fractions import Fraction
 from typing import Final
 
 import numpy as np
@@ -19,12 +20,16 @@ from watcher.path import total as all_levels
 from watcher.records import Cell, Counts, Interval, Terms
 from watcher.report.snapshot import Key, PromiseSnapshot, Published
 from watcher.report.week import Week
-from watcher.verdict import threshold
 
 ASSUMPTION: Final = (
     "holds for this one week alone, with a volume fixed beforehand and outcomes that do not react to one another"
 )
 """Of the plain exact interval."""
+
+
+def own_risk(terms: Terms, cell: Cell) -> float:
+    """The cell's part of the promise's risk, rounded down."""
+    return float(np.nextafter(float(Fraction(terms.risk) * cell.part), 0.0))
 
 
 @dataclass(frozen=True, slots=True)
@@ -114,7 +119,7 @@ def _cell(
     terms: Terms, cell: Cell, weeks: Sequence[Levels], edges: npt.NDArray[np.int64], sealed_until: int
 ) -> list[_Row]:
     design = design_of(terms)
-    own, _ = threshold(terms.risk, cell.part)
+    own = own_risk(terms, cell)
     statistics = np.array([statistic(terms, levels) for levels in weeks], dtype=np.int64).reshape(len(weeks), -1)
     counts = [all_levels(levels) if levels else NOTHING for levels in weeks]
     trials = [entered(terms, each) for each in counts]

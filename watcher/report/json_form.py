@@ -9,10 +9,9 @@ from watcher import wording
 from watcher.answer import event_json, rfc3339, standing_json
 from watcher.errors import UsageError
 from watcher.records import Interval
-from watcher.report.figures import WeekFigures
+from watcher.report.figures import WeekFigures, own_risk
 from watcher.report.snapshot import Published
 from watcher.report.weekly import CellReport, PromiseReport, Report
-from watcher.verdict import threshold
 
 
 def as_json(report: Report) -> str:
@@ -97,10 +96,9 @@ def _promise(each: PromiseReport) -> dict[str, Any]:
 
 def _cell(each: PromiseReport, cell: CellReport) -> dict[str, Any]:
     terms, standing = each.terms, cell.standing
-    own, _ = threshold(terms.risk, cell.cell.part)
     return {
         "sentence": wording.sentence(standing, terms, each.unit),
-        "risk": own,
+        "risk": own_risk(terms, cell.cell),
         "standing": standing_json(standing),
         "weeks": [_week(figures) for figures in cell.shown],
         "changes": list(cell.changes),

@@ -13,11 +13,10 @@ from markupsafe import Markup, escape
 from watcher import wording
 from watcher.records import Interval, Terms
 from watcher.report import charts, render
-from watcher.report.figures import ASSUMPTION, WeekFigures
+from watcher.report.figures import ASSUMPTION, WeekFigures, own_risk
 from watcher.report.theme import Spec
 from watcher.report.weekly import CellReport, PromiseReport, Report
 from watcher.text import safe
-from watcher.verdict import threshold
 from watcher.wording import numbers
 
 Draw = Callable[[Spec, str], str]
@@ -121,7 +120,7 @@ def _promise(each: PromiseReport, picture: Callable[[Spec], Markup]) -> dict[str
         "several": len(whole.shown) > 1,
         "lag": numbers.duration(terms.label_lag),
         "final": whole.focus is not None,
-        "risk": numbers.one_in(threshold(terms.risk, whole.cell.part)[0]),
+        "risk": numbers.one_in(own_risk(terms, whole.cell)),
         "assumption": ASSUMPTION if whole.focus is not None and whole.focus.exact is not None else "",
         "standings": [_standing(cell) for cell in each.cells],
         "pictures": _pictures(each, picture),

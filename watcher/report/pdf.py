@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
-from typing import Any
+import re
+from typing import Any, Final
 
 from watcher.errors import UsageError
+
+_PRODUCER: Final = re.compile(rb'<rdf:Description [^>]*pdf:Producer="[^"]*"[^>]*/>')
 
 
 def as_pdf(html: str) -> bytes:
@@ -38,6 +41,10 @@ def as_pdf(html: str) -> bytes:
 
 
 def _nameless(document: Any, pdf: Any) -> None:
-    """Take the name and number of the program that laid it out from the file: it would change the bytes."""
+    """Take name and number of the program that laid it out from the file: they would change its bytes."""
     del document
     pdf.info.pop("Producer", None)
+    for each in pdf.objects:
+        stream = getattr(each, "stream", None)
+        if stream is not None and each.extra.get("Type") == "/Metadata":
+            each.stream = [_PRODUCER.sub(b"", part) if isinstance(part, bytes) else part for part in stream]

@@ -7,10 +7,9 @@ import io
 from typing import Final
 
 from watcher.answer import rfc3339
-from watcher.report.figures import WeekFigures
+from watcher.report.figures import WeekFigures, own_risk
 from watcher.report.weekly import CellReport, PromiseReport, Report
 from watcher.text import csv_cell
-from watcher.verdict import threshold
 
 HEADER: Final = (
     "promise",
@@ -76,7 +75,7 @@ def _row(report: Report, each: PromiseReport, cell: CellReport, figures: WeekFig
         exact and exact.lower,
         exact and exact.upper,
         each.terms.tolerance,
-        threshold(each.terms.risk, cell.cell.part)[0],
+        own_risk(each.terms, cell.cell),
         standing.state,
         " ".join(standing.flags),
         standing.total,

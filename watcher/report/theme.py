@@ -42,7 +42,11 @@ def config(scheme: Scheme) -> Spec:
         "font": FONT,
         "background": "transparent",
         "view": {"stroke": None},
+        # One label for the picture; a name for every bar and tick would be read out one after the other. The figures
+        # themselves stand in tables beside it.
+        "mark": {"aria": False},
         "axis": {
+            "aria": False,
             "labelColor": theme.muted,
             "labelFontSize": 11,
             "titleColor": theme.muted,
