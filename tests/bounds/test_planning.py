@@ -166,6 +166,38 @@ def test_weekly_labels_for_a_wanted_delay() -> None:
     assert weekly_labels(0.03, 0.001, 2.0, 0.1) is None
 
 
+def test_weekly_labels_for_a_quick_answer() -> None:
+    """A fivefold rise within a week, 90% of the time, needs more than the limit suggests; progress is told."""
+    told: list[float] = []
+    found = weekly_labels(0.03, 0.001, 5.0, 1.0, quantile=0.9, streams=100, service_life=8 * WEEK, progress=told.append)
+    median = weekly_labels(0.03, 0.001, 5.0, 1.0, streams=100, service_life=8 * WEEK)
+
+    assert wald_limit(0.03, 0.001, 0.15) < median < found
+    assert told
+    assert all(0.0 <= done <= 1.0 for done in told)
+
+
+def test_weekly_labels_beyond_all_measure() -> None:
+    """A rise of a twentieth of a percent within a day is out of reach of ten million labels a week."""
+    assert weekly_labels(0.03, 0.001, 1.0005, 1 / 7, streams=100, service_life=2 * WEEK) is None
+
+
+def test_large_risks_are_looked_at_long_enough() -> None:
+    """At a large risk the mixture costs several times the limit; the exact pass goes on until the 90% figure is found."""
+    row = plan(0.03, 0.5, 4900, rises=(1.25,), streams=100, service_life=26 * WEEK).rises[0]
+
+    assert row.from_release.p90_labels > 4 * wald_limit(0.03, 0.1, 0.0375)
+
+
+def test_nothing_healthy_to_jump_from() -> None:
+    """If the rate before the jump breaches already, no jump can be simulated and the figures say so."""
+    found = plan(0.03, 0.001, 490, healthy=0.5, streams=100, service_life=8 * WEEK)
+
+    assert found.streams == 0
+    assert found.rises[0].after_jump.median_labels is None
+    assert math.isnan(found.rises[0].after_jump.noticed)
+
+
 @pytest.mark.parametrize(
     ("call", "name"),
     [
