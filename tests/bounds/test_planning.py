@@ -184,9 +184,9 @@ def test_weekly_labels_beyond_all_measure() -> None:
 
 def test_large_risks_are_looked_at_long_enough() -> None:
     """At a large risk the mixture costs several times the limit; the exact pass goes on until the 90% figure is found."""
-    row = plan(0.03, 0.5, 4900, rises=(1.25,), streams=100, service_life=26 * WEEK).rises[0]
+    row = plan(0.005, 0.9, 490, rises=(10.0,), streams=100, service_life=8 * WEEK).rises[0]
 
-    assert row.from_release.p90_labels > 4 * wald_limit(0.03, 0.1, 0.0375)
+    assert row.from_release.p90_labels > 4 * wald_limit(0.005, 0.18, 0.05)
 
 
 def test_nothing_healthy_to_jump_from() -> None:
