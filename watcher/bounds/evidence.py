@@ -18,8 +18,8 @@ from watcher.bounds.mixture import LIFE, Floats, Mixture, Rows, Side
 _BLOCK: Final = 65_536
 """Numbers a temporary array holds: 512 KiB stay in the cache of a core."""
 _ROUNDS: Final = 200
-_NEWTON_ROUNDS: Final = 60
-"""After so many rounds the search halves its bracket: Newton's method may crawl where a design is not convex."""
+_CURVED_ROUNDS: Final = 60
+"""After so many rounds the search halves its bracket: steps by the slope may crawl where a design is not convex."""
 _TIGHT: Final = 1e-7
 """A limit is accepted when its evidence is at most so many nats over the threshold."""
 _GAP: Final = 8.0 * np.finfo(np.float64).eps
@@ -126,11 +126,10 @@ def _limits(statistics: ArrayLike, threshold: ArrayLike, side: Side, design: Des
 
 
 class _Search:
-    """Bracketed Newton search for the limits of a block of rows.
+    """Bracketed Halley search for the limits of a block of rows.
 
     `outer` always satisfies "evidence >= threshold" as computed, `inner` never does; `outer` is returned, so that
-    every limit is rounded to the side that keeps the guarantee. Evidence of the plain designs is convex in the rate:
-    a tangent's root lies on the outer side, and the search walks towards the limit from there.
+    every limit is rounded to the side that keeps the guarantee, whatever the steps in between are worth.
     """
 
     def __init__(self, rows: Rows, thresholds: Floats, side: Side, design: Design, mixture: Mixture) -> None:
@@ -146,13 +145,13 @@ class _Search:
         for turn in range(_ROUNDS):
             if not active.size:
                 break
-            excess, slope = self._evaluate(active, point)
+            excess, slope, bend = self._evaluate(active, point)
             reached = excess >= 0.0
             outer[active[reached]] = point[reached]
             inner[active[~reached]] = point[~reached]
-            step = self._step(point, excess, slope)
+            step = self._step(point, excess, slope, bend)
             low, high = np.minimum(outer[active], inner[active]), np.maximum(outer[active], inner[active])
-            usable = (step > low) & (step < high) & (turn < _NEWTON_ROUNDS)
+            usable = (step > low) & (step < high) & (turn < _CURVED_ROUNDS)
             step = np.where(usable, step, 0.5 * (low + high))
             going = (excess < 0.0) | (excess > _TIGHT)
             going &= (high - low > _GAP * high) & (step > low) & (step < high)
@@ -173,19 +172,28 @@ class _Search:
         result[rest] = most >= self.thresholds[rest]
         return np.asarray(result)
 
-    def _evaluate(self, which: NDArray[np.intp], rate: Floats) -> tuple[Floats, Floats]:
-        """Evidence beyond the threshold (nats) and its derivative by the rate."""
+    def _evaluate(self, which: NDArray[np.intp], rate: Floats) -> tuple[Floats, Floats, Floats]:
+        """Evidence beyond the threshold (nats), its derivative by the rate, and nearly its second derivative.
+
+        The second is the variance of the slope over the mixture; the slopes' own change is left out, which is small.
+        """
         rows = self.rows[which]
         coefficients = self.design.coefficients(rate, self.side, self.mixture.shifts)
         value, parts = _log_mean(_exponents(rows, coefficients, self.mixture))
         total = _add_up(parts)
-        parts *= self.design.slope(rows, rate, self.side, self.mixture.shifts).T
-        return value - self.thresholds[which], _add_up(parts) / total
+        slopes = self.design.slope(rows, rate, self.side, self.mixture.shifts).T
+        parts *= slopes
+        slope = _add_up(parts) / total
+        parts *= slopes
+        return value - self.thresholds[which], slope, _add_up(parts) / total - slope * slope
 
-    def _step(self, point: Floats, excess: Floats, slope: Floats) -> Floats:
-        """Newton's step, aimed a trifle outside the limit; never shorter than what moves a float."""
+    def _step(self, point: Floats, excess: Floats, slope: Floats, bend: Floats) -> Floats:
+        """Halley's step, aimed a trifle outside the limit; never shorter than what moves a float."""
+        goal = excess - 0.3 * _TIGHT
         with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-            step = point - (excess - 0.3 * _TIGHT) / slope
+            newton = goal / slope
+            curved = 1.0 - 0.5 * newton * bend / slope
+            step = point - np.where(curved > 0.5, newton / curved, newton)
         least = 0.5 * _GAP * point
         direction = np.where(excess >= 0.0, -self.outward, self.outward)
         return np.where(np.abs(step - point) <= least, point + direction * least, step)
@@ -199,7 +207,7 @@ class _Search:
         labels = np.maximum(labels, 1.0)
         p = np.clip(errors, 0.0, labels) / labels
         threshold = self.thresholds[which]
-        price = 0.685 + 0.2 * np.log(threshold) + 0.25 * np.log1p(labels * p * (1.0 - p))
+        price = 0.685 + 0.2 * np.log(np.maximum(threshold, 0.1)) + 0.25 * np.log1p(labels * p * (1.0 - p))
         goal = (threshold + price) / labels
         half = np.sqrt(2.0 * goal * (p * (1.0 - p) + 0.5 * goal))
         m = _inside((p + goal + self.outward * half) / (1.0 + 2.0 * goal))
