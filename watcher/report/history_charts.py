@@ -135,7 +135,7 @@ def slices(
     ]
     told = f"Limits since the release of {len(drawn)} slices, ordered by their total."
     made = chart([], width=width, height=height, scheme=scheme, description=told)
-    for key in ("layer", "width", "height", "autosize"):
+    for key in ("layer", "width", "height", "autosize", "padding"):
         del made[key]
     return {**made, "concat": small, "columns": columns, "spacing": {"row": 22, "column": 26}}
 

@@ -83,6 +83,8 @@ def chart(layers: list[Spec], *, width: int | str, height: int, scheme: Scheme, 
         "description": description,
         "width": width,
         "height": height,
+        # Room at the right for the names of lines: another font than the one measured with may be wider.
+        "padding": {"left": 2, "top": 4, "right": 26, "bottom": 2},
         "autosize": {"type": "fit-x" if width == "container" else "pad", "contains": "padding"},
         "layer": layers,
         "config": config(scheme),
