@@ -9,7 +9,6 @@ from typing import Any
 from sqlalchemy import Connection, Select, and_, func, or_, select
 
 from watcher.ledger import canon
-from watcher.ledger.chain import day_of
 from watcher.ledger.rows import find_term, read_cells, stored_term
 from watcher.ledger.standing import instant, standing_from
 from watcher.ledger.tables import CELL, EVENT, LOOK, TERM, VERDICT
@@ -142,19 +141,6 @@ def _acknowledged(connection: Connection, promise: str | None) -> dict[tuple[int
     return who
 
 
-def look_at(connection: Connection, number: int) -> tuple[str, int, str, int, str] | None:
-    """(source, at, kind, method, digest) of a look."""
-    row = connection.execute(
-        select(LOOK.c.source, LOOK.c.at, LOOK.c.kind, LOOK.c.method, LOOK.c.digest).where(LOOK.c.number == number)
-    ).one_or_none()
-    return None if row is None else (row.source, row.at, row.kind, row.method, row.digest)
-
-
 def newest_at(connection: Connection) -> int:
     """The time of the newest look of any source; 0 without one."""
     return int(connection.execute(select(func.coalesce(func.max(LOOK.c.at), 0))).scalar_one())
-
-
-def last_day(at: int) -> date:
-    """The UTC day of an epoch."""
-    return _FIRST_DAY + timedelta(days=day_of(at))
