@@ -48,16 +48,16 @@ def write_sqlite(path: Path, found: Sequence[tuple[str | None, ...]]) -> str:
     return f'kind = "database"\nurl = "sqlite:///{path}"\ntable = "flights"\n'
 
 
-def write_postgresql(connection: psycopg.Connection, url: str, found: Sequence[tuple[str | None, ...]]) -> str:
+def write_postgresql(url: str, found: Sequence[tuple[str | None, ...]]) -> str:
     """The rows as a table of a PostgreSQL database, times typed; returns the lines of the source."""
-    connection.execute(
-        "create table flights (flight text, decided_at timestamptz, reported_at timestamptz,"
-        " origin text, predicted text, observed text)"
-    )
-    with connection.cursor() as cursor, cursor.copy("copy flights from stdin") as copy:
-        for line in found:
-            copy.write_row(line)
-    connection.commit()
+    with psycopg.connect(url.replace("+psycopg", "")) as connection:
+        connection.execute(
+            "create table flights (flight text, decided_at timestamptz, reported_at timestamptz,"
+            " origin text, predicted text, observed text)"
+        )
+        with connection.cursor() as cursor, cursor.copy("copy flights from stdin") as copy:
+            for line in found:
+                copy.write_row(line)
     return f'kind = "database"\nurl = "{url}"\ntable = "flights"\n'
 
 

@@ -21,8 +21,8 @@ from sklearn.preprocessing import OneHotEncoder, StandardScaler
 LATE = 15
 """Minutes of delay at arrival from which a flight counts as late."""
 RELEASED = int(datetime(2013, 3, 16, tzinfo=UTC).timestamp())
-DAYS = 291
-"""16 March to 31 December."""
+DAYS = 293
+"""16 March to 2 January, in UTC: the last evening of the year reaches into the last but one, the last one is empty."""
 REPORTED_AFTER = 60
 """Minutes after landing at which the arrival is reported."""
 
