@@ -273,14 +273,18 @@ def _acting_routes(made: APIRouter, site: Site, access: Access) -> None:
     """What needs the role act."""
     actor = Depends(access.actor)
 
-    @made.get("/promises/{name}/rejects", response_model=schema.Rejects, responses=_csv_too())
-    def rejects(visitor: Annotated[Visitor, actor], name: Name, format: Form = "json") -> Any:  # noqa: A002
+    @made.get("/rejects", response_model=schema.Rejects, responses=_csv_too())
+    def rejects(
+        visitor: Annotated[Visitor, actor],
+        promise: Annotated[str, Query(min_length=1, max_length=80)],
+        format: Form = "json",
+    ) -> Any:  # noqa: A002
         """Rows that the newest look could not use; needs the role act, because raw rows may hold personal data."""
         del visitor
-        ledger, wanted = site.ledger(), from_segment(name)
-        if all(each.terms.promise != wanted for each in ledger.terms(open_only=False)):
+        ledger = site.ledger()
+        if all(each.terms.promise != promise for each in ledger.terms(open_only=False)):
             raise Refused(404, "no-such-promise", "There is no promise of this name in the ledger.")
-        found, samples = ledger.rejects(wanted)
+        found, samples = ledger.rejects(promise)
         rows = [
             {"reason": r.reason, "file": r.file, "line": r.line, "id": r.id, "values": dict(r.values)} for r in samples
         ]
