@@ -107,6 +107,8 @@ Row = dict[str, str | None]
 def random_rows(seed: int, number: int, times: list[str | None]) -> list[Row]:
     rng = Random(seed)
     every = pools(times)
+    every["parcel"] = [*every["parcel"], *[f"id{i}" for i in range(number)]]
+    every["customer"] = [*every["customer"], *[f"k{i}" for i in range(number // 4)]]
     return [{name: rng.choice(every[name]) for name in COLUMNS} for _ in range(number)]
 
 

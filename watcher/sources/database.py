@@ -21,9 +21,8 @@ from watcher.sources.base import SourceSpec, Survey
 from watcher.sources.header import missing
 from watcher.sources.statement import Held, Statement, Table, parts_of
 from watcher.sources.surveying import SAMPLE, survey_of
-from watcher.sources.tallying import answer
+from watcher.sources.tallying import answer, rejected_row
 
-_FETCH: Final = 10_000
 _CONNECT: Final = 10
 """Seconds to reach a server."""
 _POSTGRESQL: Final[Mapping[int, Held]] = {
@@ -38,7 +37,7 @@ _FUNCTIONS: Final[Mapping[str, tuple[int, Callable[..., Any]]]] = {
     "watcher_plain": (1, normal.plain),
     "watcher_number": (1, normal.number_of),
     "watcher_wall": (1, normal.wall_of),
-    "watcher_offset": (1, normal.offset_of),
+    "watcher_zoned": (1, normal.zoned_of),
     "watcher_count": (2, normal.count_of),
 }
 
@@ -94,21 +93,7 @@ class DatabaseSource:
         with self._session() as session:
             rows = []
             for row in session.run(session.statement(question).rejected_rows(reason, limit)):
-                values = {
-                    key.removeprefix("raw_"): None if value is None else str(value)
-                    for key, value in row._asdict().items()
-                }
-                keep = self._spec.keep_raw
-                rows.append(
-                    RejectedRow(
-                        question.promise,
-                        reason,
-                        place,
-                        None,
-                        values.get("id") if keep else None,
-                        values if keep else {},
-                    )
-                )
+                rows.append(rejected_row(question, reason, place, None, row, keep=self._spec.keep_raw))
             return rows
 
     def survey(self, question: Question | None = None) -> Survey:
@@ -169,11 +154,11 @@ class _Session:
             raise self._failed("timeout", f"no answer within timeout = {self._spec.timeout:g} s")
         if self._connection.dialect.name == "postgresql":
             self._connection.exec_driver_sql(f"SET LOCAL statement_timeout = {max(1, int(left * 1000))}")
-        return self._connection.execution_options(yield_per=_FETCH).execute(select)
+        return self._connection.execute(select)
 
     def run(self, select: sa.Select[Any]) -> Iterator[Any]:
-        """Execute a SELECT and yield its rows, as they come."""
-        yield from self._execute(select)
+        """Execute a SELECT and yield its rows: no more than there are groups."""
+        yield from self._execute(select).fetchall()
 
     def bound_rows(self) -> None:
         """Refuse a relation with more than max_rows rows; stops counting there."""

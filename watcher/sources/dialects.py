@@ -14,7 +14,7 @@ from sqlalchemy.ext.compiler import compiles
 from sqlalchemy.sql.compiler import SQLCompiler
 from sqlalchemy.sql.functions import FunctionElement
 
-from watcher.sources.normal import NUMBER, SPELLINGS, STAMP, WHOLE
+from watcher.sources.normal import COUNT, NUMBER, OFFSET, SPELLINGS, STAMP, WHOLE
 
 
 class DuckDBText(PGDialect):
@@ -48,15 +48,22 @@ class Number(FunctionElement[float]):
     inherit_cache = True
 
 
-class Wall(FunctionElement[int]):
-    """The wall clock seconds of an RFC 3339 text without its offset, or NULL."""
+class Exact(FunctionElement[str]):
+    """The value as text to be compared byte by byte, whatever the column's own rules of comparison are."""
+
+    type = sa.Text()
+    inherit_cache = True
+
+
+class Zoned(FunctionElement[int]):
+    """The seconds since 1970 of an RFC 3339 text with an offset, blanks around it allowed, or NULL."""
 
     type = sa.BigInteger()
     inherit_cache = True
 
 
-class Offset(FunctionElement[int]):
-    """The offset at the end of an RFC 3339 text in seconds east of UTC, or NULL."""
+class Wall(FunctionElement[int]):
+    """The wall clock seconds of an RFC 3339 text without an offset, blanks around it allowed, or NULL."""
 
     type = sa.BigInteger()
     inherit_cache = True
@@ -135,33 +142,45 @@ def _(element: Number, compiler: SQLCompiler, **kw: Any) -> str:
     return f"(CASE WHEN regexp_full_match({x}, '{NUMBER}') THEN TRY_CAST(trim({x}) AS DOUBLE) END)"
 
 
+@compiles(Exact, "duckdb")
+def _(element: Exact, compiler: SQLCompiler, **kw: Any) -> str:
+    (x,) = _parts(element, compiler, **kw)
+    return f"CAST({x} AS VARCHAR)"
+
+
+_BLANK: Final = "[ \\t\\r\\n]*"
+_TRIMMED: Final = "trim({x}, E' \\t\\r\\n')"
+
+
+def _duck_wall(text: str) -> str:
+    return f"epoch_ms(TRY_CAST(left({text}, 19) AS TIMESTAMP)) // 1000"
+
+
+@compiles(Zoned, "duckdb")
+def _(element: Zoned, compiler: SQLCompiler, **kw: Any) -> str:
+    (x,) = _parts(element, compiler, **kw)
+    # 20 bytes from a digit to a Z: strptime then accepts exactly two digits in each field and does the whole check
+    usual = f"strlen({x}) = 20 AND {x} >= '0' AND suffix({x}, 'Z')"
+    fast = f"CASE WHEN {usual} THEN epoch_ms(try_strptime({x}, '%Y-%m-%dT%H:%M:%SZ')) // 1000 END"
+    text = _TRIMMED.format(x=x)
+    sign = f"(CASE WHEN left(right({text}, 6), 1) = '-' THEN -1 ELSE 1 END)"
+    digits = f"CAST(left(right({text}, 5), 2) AS BIGINT) * 3600 + CAST(right({text}, 2) AS BIGINT) * 60"
+    offset = f"(CASE WHEN right({text}, 1) IN ('Z', 'z') THEN 0 ELSE {sign} * ({digits}) END)"
+    slow = f"CASE WHEN regexp_full_match({x}, '{_BLANK}{STAMP}{OFFSET}{_BLANK}') THEN {_duck_wall(text)} - {offset} END"
+    return f"coalesce({fast}, {slow})"
+
+
 @compiles(Wall, "duckdb")
 def _(element: Wall, compiler: SQLCompiler, **kw: Any) -> str:
     (x,) = _parts(element, compiler, **kw)
-    seconds = f"epoch_ms(TRY_CAST(left({x}, 19) AS TIMESTAMP)) // 1000"
-    return f"(CASE WHEN regexp_full_match({x}, '{STAMP}') THEN {seconds} END)"
-
-
-def _offset(x: str) -> str:
-    sign = f"(CASE WHEN left(right({x}, 6), 1) = '-' THEN -1 ELSE 1 END)"
-    hours, minutes = f"CAST(left(right({x}, 5), 2) AS BIGINT)", f"CAST(right({x}, 2) AS BIGINT)"
-    return (
-        f"(CASE WHEN right({x}, 1) IN ('Z', 'z') THEN 0 "
-        f"WHEN left(right({x}, 6), 1) IN ('+', '-') THEN {sign} * ({hours} * 3600 + {minutes} * 60) END)"
-    )
-
-
-@compiles(Offset, "duckdb")
-def _(element: Offset, compiler: SQLCompiler, **kw: Any) -> str:
-    x, wall = _parts(element, compiler, **kw)
-    return f"(CASE WHEN {wall} IS NOT NULL THEN {_offset(x)} END)"
+    return f"(CASE WHEN regexp_full_match({x}, '{_BLANK}{STAMP}{_BLANK}') THEN {_duck_wall(_TRIMMED.format(x=x))} END)"
 
 
 @compiles(Count, "duckdb")
 def _(element: Count, compiler: SQLCompiler, **kw: Any) -> str:
     x, units = _parts(element, compiler, **kw)
-    shape = "[0-9]{1,14}([.][0-9]{1,9})?"
-    return f"(CASE WHEN regexp_full_match({x}, '{shape}') THEN CAST(split_part({x}, '.', 1) AS BIGINT) // {units} END)"
+    whole = f"CAST(split_part({_TRIMMED.format(x=x)}, '.', 1) AS BIGINT)"
+    return f"(CASE WHEN regexp_full_match({x}, '{_BLANK}{COUNT}{_BLANK}') THEN {whole} // {units} END)"
 
 
 @compiles(Digits, "duckdb")
@@ -183,6 +202,12 @@ def _(element: Digest, compiler: SQLCompiler, **kw: Any) -> str:
 def _(element: Trimmed, compiler: SQLCompiler, **kw: Any) -> str:
     (x,) = _parts(element, compiler, **kw)
     return f"(btrim(CAST({x} AS TEXT), E' \\t\\r\\n') COLLATE \"C\")"
+
+
+@compiles(Exact, "postgresql")
+def _(element: Exact, compiler: SQLCompiler, **kw: Any) -> str:
+    (x,) = _parts(element, compiler, **kw)
+    return f'(CAST({x} AS TEXT) COLLATE "C")'
 
 
 @compiles(Plain, "postgresql")
@@ -239,19 +264,32 @@ def _(element: Number, compiler: SQLCompiler, **kw: Any) -> str:
     return f"watcher_number({', '.join(_parts(element, compiler, **kw))})"
 
 
+@compiles(Exact, "sqlite")
+def _(element: Exact, compiler: SQLCompiler, **kw: Any) -> str:
+    (x,) = _parts(element, compiler, **kw)
+    # CAST alone would keep a column's COLLATE NOCASE
+    return f"(CAST({x} AS TEXT) || '')"
+
+
+_BLANKS: Final = "char(32, 9, 13, 10)"
+
+
+@compiles(Zoned, "sqlite")
+def _(element: Zoned, compiler: SQLCompiler, **kw: Any) -> str:
+    (x,) = _parts(element, compiler, **kw)
+    return f"watcher_zoned(trim({x}, {_BLANKS}))"
+
+
 @compiles(Wall, "sqlite")
 def _(element: Wall, compiler: SQLCompiler, **kw: Any) -> str:
-    return f"watcher_wall({', '.join(_parts(element, compiler, **kw))})"
-
-
-@compiles(Offset, "sqlite")
-def _(element: Offset, compiler: SQLCompiler, **kw: Any) -> str:
-    return f"watcher_offset({_parts(element, compiler, **kw)[0]})"
+    (x,) = _parts(element, compiler, **kw)
+    return f"watcher_wall(trim({x}, {_BLANKS}))"
 
 
 @compiles(Count, "sqlite")
 def _(element: Count, compiler: SQLCompiler, **kw: Any) -> str:
-    return f"watcher_count({', '.join(_parts(element, compiler, **kw))})"
+    x, units = _parts(element, compiler, **kw)
+    return f"watcher_count(trim({x}, {_BLANKS}), {units})"
 
 
 @compiles(Digits, "sqlite")

@@ -23,13 +23,13 @@ from watcher.sources.header import Header, positions, read_header
 from watcher.sources.lines import Lines, Malformed
 from watcher.sources.statement import Statement, Table, parts_of
 from watcher.sources.surveying import SAMPLE, survey_of
-from watcher.sources.tallying import answer
+from watcher.sources.tallying import answer, rejected_row
 
 _T = TypeVar("_T")
 
 SETTLED: Final = 60
 """Seconds after which a last line without a newline is taken to be finished."""
-_SAMPLE: Final = 1_000_000
+_SAMPLE: Final = 200_000
 """Rows in which the values of slice columns are counted before anything is aggregated."""
 
 
@@ -209,17 +209,10 @@ class FileSource:
         return replace(found, lines=records, blank=empty, has_future=found.has_future or held)
 
     def _rejected(self, question: Question, reason: str, row: Any, files: Sequence[_File]) -> RejectedRow:
-        values = {name.removeprefix("raw_"): value for name, value in row._asdict().items() if name.startswith("raw_")}
         file = next(file for file in files if str(file.read) == row.extra0)
         plain = file.lines.embedded == 0 and not physical.blank(file.read, file.lines, file.header.delimiter)
-        return RejectedRow(
-            question.promise,
-            reason,
-            file.path.name,
-            file.header.lines + row.extra1 if plain else None,
-            values.get("id") if self._spec.keep_raw else None,
-            values if self._spec.keep_raw else {},
-        )
+        line = file.header.lines + row.extra1 if plain else None
+        return rejected_row(question, reason, file.path.name, line, row, keep=self._spec.keep_raw)
 
 
 def _ranking(statement: Statement, engine: Duck) -> Statement:

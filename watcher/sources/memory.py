@@ -16,7 +16,7 @@ from watcher.sources.database import equip
 from watcher.sources.header import missing
 from watcher.sources.statement import Statement, Table, parts_of
 from watcher.sources.surveying import SAMPLE, survey_of
-from watcher.sources.tallying import answer
+from watcher.sources.tallying import answer, rejected_row
 
 
 class MemorySource:
@@ -64,11 +64,8 @@ class MemorySource:
 
     def rejected(self, question: Question, reason: str, limit: int = 20) -> list[RejectedRow]:
         """Return at most `limit` of the rows that were rejected for `reason`."""
-        found = []
-        for row in self._run(self._statement(question).rejected_rows(reason, limit)):
-            values = {key.removeprefix("raw_"): value for key, value in row._asdict().items()}
-            found.append(RejectedRow(question.promise, reason, "memory", None, values.get("id"), values))
-        return found
+        rows = self._run(self._statement(question).rejected_rows(reason, limit))
+        return [rejected_row(question, reason, "memory", None, row, keep=True) for row in rows]
 
     def survey(self, question: Question | None = None) -> Survey:
         """Look at the columns and first rows (no question), or at the values that a question would read."""

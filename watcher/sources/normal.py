@@ -16,18 +16,18 @@ WHOLE: Final = "-?[0-9]+[.]0+"
 """A whole number written with a fraction of zeros, as tables of floating-point numbers do: 1.0 is 1."""
 NUMBER: Final = "[+-]?([0-9]{1,30}([.][0-9]{0,30})?|[.][0-9]{1,30})([eE][+-]?[0-9]{1,2})?"
 """What every engine reads as the same double; longer or larger forms are not numbers here."""
-STAMP: Final = (
-    "[0-9]{4}-[0-9]{2}-[0-9]{2}[T ]([01][0-9]|2[0-3]):[0-5][0-9]:[0-5][0-9]([.][0-9]{1,9})?"
-    "([Zz]|[+-]([01][0-9]|2[0-3]):[0-5][0-9])?"
-)
-"""RFC 3339 with a capital T or a blank; the offset may be missing where the source declares a time zone."""
+STAMP: Final = "[0-9]{4}-[0-9]{2}-[0-9]{2}[T ]([01][0-9]|2[0-3]):[0-5][0-9]:[0-5][0-9]([.][0-9]{1,9})?"
+"""RFC 3339 with a capital T or a blank, without its offset."""
+OFFSET: Final = "([Zz]|[+-]([01][0-9]|2[0-3]):[0-5][0-9])"
+COUNT: Final = "[0-9]{1,14}([.][0-9]{1,9})?"
 SECONDS: Final = {"epoch-seconds": 1, "epoch-milliseconds": 1000}
 """Time format -> units a second."""
 
 _whole = re.compile(WHOLE)
 _number = re.compile(NUMBER)
 _stamp = re.compile(STAMP)
-_count = re.compile("([0-9]{1,14})([.][0-9]{1,9})?")
+_zoned = re.compile(STAMP + OFFSET)
+_count = re.compile(COUNT)
 _same: Final = {spelling: value for value, spellings in SPELLINGS for spelling in spellings}
 
 
@@ -50,29 +50,29 @@ def number_of(text: str | None) -> float | None:
     return float(text) if text is not None and _number.fullmatch(text) else None
 
 
-def wall_of(text: str | None) -> int | None:
-    """Return the wall clock reading of an RFC 3339 text in seconds, fraction cut off, offset not applied; None if unreadable."""
-    if text is None or not _stamp.fullmatch(text):
-        return None
+def _wall(text: str) -> int | None:
     try:
         return int(datetime.fromisoformat(text[:19]).replace(tzinfo=UTC).timestamp())
     except ValueError:  # 30 February
         return None
 
 
-def offset_of(text: str | None) -> int | None:
-    """Return the offset at the end of an RFC 3339 text in seconds east; None if there is none."""
-    if text is None or len(text) < 20:
+def wall_of(text: str | None) -> int | None:
+    """Return the wall clock seconds of a trimmed RFC 3339 text without an offset, fraction cut off; None if it is none."""
+    return _wall(text) if text is not None and _stamp.fullmatch(text) else None
+
+
+def zoned_of(text: str | None) -> int | None:
+    """Return the seconds since 1970 of a trimmed RFC 3339 text with an offset, fraction cut off; None if it is none."""
+    if text is None or not _zoned.fullmatch(text) or (wall := _wall(text)) is None:
         return None
     if text[-1] in "Zz":
-        return 0
-    if text[-6] not in "+-" or not text[-5:-3].isdigit() or not text[-2:].isdigit():
-        return None
+        return wall
     seconds = int(text[-5:-3]) * 3600 + int(text[-2:]) * 60
-    return seconds if text[-6] == "+" else -seconds
+    return wall - seconds if text[-6] == "+" else wall + seconds
 
 
 def count_of(text: str | None, units: int) -> int | None:
     """Return the whole seconds of an unsigned count of `units` a second (1 or 1000), fraction cut off; None if unreadable."""
     match = _count.fullmatch(text) if text is not None else None
-    return int(match[1]) // units if match else None
+    return int(match[0].partition(".")[0]) // units if match else None

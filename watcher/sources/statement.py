@@ -2,7 +2,7 @@
 
 Each stage is a SELECT from the one before:
 
-    trimmed -> read -> timed -> placed -> ranked (only with an id) -> judged -> [clustered] -> counted
+    exact -> timed -> moments -> [gathered] -> texts -> placed -> [ranked] -> judged -> [clustered] -> counted
 
 Each row ends in exactly one `kind`: usable, outside, duplicate, or the first reason that applies, in the order of
 `records.REASONS`. Names of columns and values of the outside world enter as quoted names and bound values only.
@@ -74,6 +74,8 @@ class Statement:
     """A table of digests (`digest`) of the ids that may occur more than once: only their rows are ranked."""
     unique: bool = False
     """True: no id occurs twice, so nothing needs to be ranked."""
+    raw: bool = False
+    """True: the values as read are carried along."""
     prefix: str = ""
     """Of the names of the stages, which stand beside one another: nested ones overflow SQLite's parser."""
 
@@ -101,38 +103,39 @@ class Statement:
         flat = sa.select(
             *keys,
             level.label("level"),
-            *[flag.label(name) for name, flag in sums.items()],
+            rows.c.n,
+            *[(flag * rows.c.n).label(name) for name, flag in sums.items()],
             sa.case((labelled, rows.c.at)).label("newest"),
             *ahead,
         ).cte(f"{self.prefix}flat")
         group = [flat.c[key.name] for key in keys] + [flat.c.level]
         return sa.select(
             *group,
-            sa.cast(sa.func.count(), sa.BigInteger).label("predictions"),
+            _sum(flat.c.n, "predictions"),
             *[_sum(flat.c[name], name) for name in sums],
             sa.func.max(flat.c.newest).label("newest"),
             *[sa.func.max(flat.c.ahead).label("ahead") for _ in ahead],
         ).group_by(*group)
 
     def values(self, rows: int | None = None) -> sa.Select[Any]:
-        """Count the distinct values of each slice column among the rows that have a place in time."""
+        """Count the distinct values of each slice column among the rows that have a place in time, or some of them."""
         placed = self._placed()
         names = [self._slice(name) for name in self.question.slices]
         some = sa.select(*[placed.c[name] for name in names]).where(placed.c.kind == USABLE)
-        some_rows = (some.limit(rows) if rows is not None else some).cte(f"{self.prefix}some")
+        some_rows = (some.limit(rows) if rows is not None else some).cte("some")
         return sa.select(*[sa.func.count(sa.distinct(some_rows.c[name])).label(name) for name in names])
 
     def repeated(self) -> sa.Select[Any]:
-        """Select the digests of the ids that may occur more than once."""
-        placed = self._placed()
-        digest = dialects.Digest(placed.c.id).label("digest")
-        digests = sa.select(digest).where(placed.c.kind == USABLE).cte(f"{self.prefix}digests")
+        """Select the digests of the ids that may occur more than once, whatever becomes of their rows."""
+        marked = self._identified()
+        digest = dialects.Digest(marked.c.id).label("digest")
+        digests = sa.select(digest).where(marked.c.id.is_not(None)).cte("digests")
         return sa.select(digests.c.digest).group_by(digests.c.digest).having(sa.func.count() > 1)
 
     def late_labels(self) -> sa.Select[Any]:
         """Count the labels of sealed buckets that came at or after their bucket's end + label_lag, once an id."""
         q = self.question
-        timed = self._timed(since=q.released)
+        timed = self._texts(self._timed(self._exact(since=q.released)))
         late = sa.and_(
             timed.c.at >= q.released,
             timed.c.at < q.open_from,
@@ -145,14 +148,18 @@ class Statement:
         return sa.select(sa.cast(what, sa.BigInteger)).select_from(timed).where(late)
 
     def rejected_rows(self, reason: str, limit: int) -> sa.Select[Any]:
-        """Select the values, as read, of rows that were rejected for `reason`."""
-        rows = self._judged(raw=True)
-        columns = [column for column in rows.c if column.name.startswith(("raw", "extra"))]
-        return sa.select(*columns).where(rows.c.kind == kind_of(reason)).order_by(*columns).limit(limit)
+        """Select the values, as read, of rows that were rejected for `reason`, as columns raw0, raw1, ... and extra0, ...
+
+        Their order is that of `parts_of(question)` and `Table.extra`.
+        """
+        rows = replace(self, raw=True)._judged()
+        raw = [rows.c[f"raw{i}"] for i in range(len(parts_of(self.question)))]
+        extra = [rows.c[f"extra{i}"] for i in range(len(self.table.extra))]
+        return sa.select(*raw, *extra).where(rows.c.kind == kind_of(reason)).order_by(*extra, *raw).limit(limit)
 
     def looked_at(self) -> sa.CTE:
-        """Return the rows with normalised `prediction`, `label` and `at` for a survey; NULL `at` where `where` differs."""
-        return self._timed()
+        """Return all rows with normalised texts and `at`, for a survey."""
+        return self._texts(self._timed(self._exact()))
 
     def here(self, rows: sa.CTE) -> Expression:
         """Whether a row meets the question's `where`."""
@@ -194,79 +201,152 @@ class Statement:
         c = self.question.columns
         return {"time": c.time} | ({"labelled_at": c.labelled_at} if c.labelled_at else {})
 
-    def _trimmed(self, since: int | None, *, raw: bool) -> sa.CTE:
+    def _exact(self, since: int | None = None, *, gathered: bool = False, among: bool | None = None) -> sa.CTE:
+        """Every part as the source holds it, texts to be compared byte by byte; no row is left out but by an index.
+
+        `among`: only the rows whose id is among the suspects (True) or not (False). `gathered`: of the id only whether
+        there is one.
+        """
         columns, holds = self.table.columns, self.table.holds
-        picked = [dialects.Trimmed(columns[column]).label(part) for part, column in self._parts().items()]
+        source: sa.FromClause = self.table.rows
+        picked: list[Expression] = [
+            dialects.Exact(columns[column]).label(part) for part, column in self._parts().items() if part != "id"
+        ]
         picked += [
-            (dialects.Trimmed(columns[column]) if holds[column] == "text" else columns[column]).label(part)
+            (dialects.Exact(columns[column]) if holds[column] == "text" else columns[column]).label(part)
             for part, column in self._times().items()
         ]
-        if raw:
-            everything = {**self._times(), **self._parts()}
-            picked += [columns[column].label(f"raw_{part}") for part, column in everything.items()]
+        if self.question.columns.id:
+            trimmed = dialects.Trimmed(columns[self.question.columns.id])
+            picked.append((sa.case((trimmed != "", "1")) if gathered and among is None else trimmed).label("id"))
+        if self.raw:
+            picked += [columns[name].label(f"raw{i}") for i, name in enumerate(parts_of(self.question))]
             picked += [self.table.rows.c[name].label(f"extra{i}") for i, name in enumerate(self.table.extra)]
-        select = sa.select(*picked).select_from(self.table.rows)
+        select = sa.select(*picked).select_from(source)
         time = self.question.columns.time
         if since is not None and holds[time] == "instant":  # lets an index on the time column bound the read
             bound = sa.func.to_timestamp(since, type_=sa.DateTime(timezone=True))
             select = select.where(sa.or_(columns[time] >= bound, columns[time].is_(None)))
-        return select.cte(f"{self.prefix}trimmed")
+        exact = self._stage("exact", select)
+        if among is None:
+            return exact
+        assert self.suspects is not None
+        digests = sa.select(self.suspects.c.digest)
+        value = sa.func.nullif(dialects.Plain(exact.c.id), "")
+        rest = [column for column in exact.c if column.name != "id"]
+        marked = self._stage("marked", sa.select(*rest, value.label("id")))
+        digest = dialects.Digest(marked.c.id)
+        if among:
+            return self._stage("suspected", sa.select(marked).where(digest.in_(digests)))
+        rest = [column for column in marked.c if column.name != "id"]
+        presence = sa.case((marked.c.id.is_not(None), "1")).label("id")
+        alone = sa.or_(marked.c.id.is_(None), digest.not_in(digests))
+        return self._stage("alone", sa.select(*rest, presence).where(alone))
 
-    def _read(self, since: int | None, *, raw: bool) -> sa.CTE:
-        trimmed = self._trimmed(since, raw=raw)
-        numbers = {"weight", "loss", "labelling_probability"}
-        picked: list[Expression] = [column for column in trimmed.c if column.name.startswith(("raw", "extra"))]
-        for part in self._parts():
-            value = trimmed.c[part]
-            picked.append(
-                (dialects.Number(value) if part in numbers else sa.func.nullif(dialects.Plain(value), "")).label(part)
-            )
-            if part == "loss":
-                picked.append(sa.func.nullif(value, "").label("loss_text"))
-        for part, column in self._times().items():
-            value = trimmed.c[part]
-            held = self.table.holds[column]
-            picked.append(value.label(part))
-            if held == "text" and self.question.time_format == "rfc3339":
-                picked.append(dialects.Wall(value).label(f"{part}_wall"))
-        return sa.select(*picked).cte(f"{self.prefix}read")
+    def _identified(self) -> sa.CTE:
+        """The normalised id alone."""
+        column = self.table.columns[self.question.columns.id or ""]
+        trimmed = self._stage(
+            "trimmed_id", sa.select(dialects.Trimmed(column).label("id")).select_from(self.table.rows)
+        )
+        return self._stage("plain_id", sa.select(sa.func.nullif(dialects.Plain(trimmed.c.id), "").label("id")))
 
-    def _timed(self, since: int | None = None, *, raw: bool = False) -> sa.CTE:
-        read = self._read(since, raw=raw)
-        drop = {"time", "labelled_at", "time_wall", "labelled_at_wall"}
-        picked: list[Expression] = [column for column in read.c if column.name not in drop]
+    def _stage(self, name: str, select: sa.Select[Any] | sa.CompoundSelect[Any]) -> sa.CTE:
+        return select.cte(self.prefix + name)
+
+    def _timed(self, exact: sa.CTE) -> sa.CTE:
+        """Turn the columns of time into seconds since 1970; NULL where they cannot be read or are not believed."""
+        rest = [column for column in exact.c if column.name not in ("time", "labelled_at")]
+        picked: list[Expression] = []
         for part, column in self._times().items():
-            instant = self._instant(read, part, self.table.holds[column])
-            picked.append(instant.label("at_read" if part == "time" else "labelled_at_read"))
+            value, held = exact.c[part], self.table.holds[column]
+            picked += [reading.label(f"{part}_{name}") for name, reading in self._readings(value, held).items()]
             if part == "labelled_at":
-                empty = read.c[part].is_(None)
-                if self.table.holds[column] == "text":
-                    empty = sa.or_(empty, read.c[part] == "")
-                picked.append(sa.case((empty, 0), else_=1).label("labelled_at_given"))
-        rows = sa.select(*picked).cte(f"{self.prefix}instants")
-        kept = [column for column in rows.c if column.name not in ("at_read", "labelled_at_read")]
-        times = [
-            sa.case((rows.c[name].between(0, LAST_SECOND), rows.c[name])).label(name.removesuffix("_read"))
-            for name in ("at_read", "labelled_at_read")
+                trimmed = sa.func.coalesce(dialects.Trimmed(value), "") if held == "text" else None
+                given = trimmed != "" if trimmed is not None else value.is_not(None)
+                picked.append(sa.case((given, 1), else_=0).label("labelled_at_given"))
+        read = self._stage("readings", sa.select(*rest, *picked))
+        given_too = [read.c.labelled_at_given] if self.question.columns.labelled_at else []
+        instants = [self._instant(read, part).label(f"{part}_at") for part in self._times()]
+        rows = self._stage("instants", sa.select(*[read.c[column.name] for column in rest], *given_too, *instants))
+        names = {"time_at": "at", "labelled_at_at": "labelled_at"}
+        kept = [column for column in rows.c if column.name not in names]
+        believed = [
+            sa.case((rows.c[name].between(0, LAST_SECOND), rows.c[name])).label(label)
+            for name, label in names.items()
             if name in rows.c
         ]
-        return sa.select(*kept, *times).cte(f"{self.prefix}timed")
+        return self._stage("timed", sa.select(*kept, *believed))
 
-    def _instant(self, read: sa.CTE, part: str, held: Held) -> Expression:
-        """Seconds since 1970 of a time column, or NULL; the wall clock of a declared zone is turned by bound offsets."""
+    def _readings(self, value: Expression, held: Held) -> dict[str, Expression]:
+        """Read a column of time: `zoned` seconds since 1970, or `wall` seconds on a clock of the source's zone, or both."""
         q = self.question
-        value = read.c[part]
-        units = SECONDS.get(q.time_format)
+        units = sa.literal_column(str(SECONDS.get(q.time_format, 1)))
         if held == "text":
-            if units is not None:
-                return dialects.Count(value, sa.literal_column(str(units)))
-            wall = read.c[f"{part}_wall"]
-            offset = dialects.Offset(value, wall)
-            return wall - (sa.func.coalesce(offset, self._zone(wall)) if q.source_time_zone else offset)
+            if q.time_format in SECONDS:
+                return {"zoned": dialects.Count(value, units)}
+            zoned: dict[str, Expression] = {"zoned": dialects.Zoned(value)}
+            return zoned | ({"wall": dialects.Wall(value)} if q.source_time_zone else {})
         if held == "number":
-            return dialects.Amount(value, sa.literal_column(str(units or 1)))
-        seconds = dialects.Stamp(value)
-        return seconds if held == "instant" else seconds - self._zone(seconds)
+            return {"zoned": dialects.Amount(value, units)}
+        return {"zoned" if held == "instant" else "wall": dialects.Stamp(value)}
+
+    def _instant(self, read: sa.CTE, part: str) -> Expression:
+        found = [read.c[f"{part}_zoned"]] if f"{part}_zoned" in read.c else []
+        if f"{part}_wall" in read.c:
+            wall = read.c[f"{part}_wall"]
+            found.append(wall - self._zone(wall))
+        return found[0] if len(found) == 1 else sa.func.coalesce(*found)
+
+    def _moments(self, timed: sa.CTE) -> sa.CTE:
+        """Say of each row what follows from its times alone: its place, whether its label is late, what is ahead."""
+        q, c = self.question, self.question.columns
+        at = timed.c.at
+        bad = at.is_(None)
+        if c.labelled_at:
+            bad = sa.or_(bad, sa.and_(timed.c.labelled_at_given == 1, timed.c.labelled_at.is_(None)))
+        kinds: list[tuple[Any, int]] = [(at < self._since(), OUTSIDE)]
+        if q.at_given:
+            kinds.append((at >= q.now, OUTSIDE))
+        kinds += self._reason("bad-time", bad)
+        kinds += self._reason("future-time", at > q.now)
+        kept = [column for column in timed.c if column.name not in ("labelled_at", "labelled_at_given")]
+        picked: list[Expression] = [*kept, _kind(kinds, "moment"), self._local(at).label("bucket")]
+        if c.labelled_at:
+            after = timed.c.labelled_at
+            late = sa.or_(after >= q.now, self._local(after - q.label_lag) > self._local(at))
+            picked.append(sa.case((late, 1), else_=0).label("late"))
+        if c.labelled_at or q.at_given:
+            later = [at >= q.now, *([timed.c.labelled_at >= q.now] if c.labelled_at else [])]
+            picked.append(sa.case((sa.or_(*later), 1), else_=0).label("ahead"))
+        return self._stage("moments", sa.select(*picked))
+
+    def _gathered(self, moments: sa.CTE) -> sa.CTE:
+        """Put rows together that no later stage can tell apart: few are left, and only these are normalised and judged."""
+        place = sa.case((moments.c.moment == USABLE, moments.c.bucket)).label("bucket")
+        keys = [column for column in moments.c if column.name not in ("at", "bucket")]
+        spans = self._stage("spans", sa.select(*keys, place, moments.c.at))
+        group = [column for column in spans.c if column.name != "at"]
+        number = sa.cast(sa.func.count(), sa.BigInteger).label("n")
+        return self._stage("gathered", sa.select(*group, sa.func.max(spans.c.at).label("at"), number).group_by(*group))
+
+    def _texts(self, rows: sa.CTE) -> sa.CTE:
+        """Bring every text into its one spelling and read the numbers."""
+        parts = self._parts()
+        rest = [column for column in rows.c if column.name not in parts]
+        trimmed = self._stage(
+            "trimmed", sa.select(*rest, *[dialects.Trimmed(rows.c[part]).label(part) for part in parts])
+        )
+        picked: list[Expression] = [trimmed.c[column.name] for column in rest]
+        for part in parts:
+            value = trimmed.c[part]
+            if part in ("weight", "loss", "labelling_probability"):
+                picked.append(dialects.Number(value).label(part))
+            else:
+                picked.append(sa.func.nullif(dialects.Plain(value), "").label(part))
+            if part == "loss":
+                picked.append(sa.func.nullif(value, "").label("loss_text"))
+        return self._stage("texts", sa.select(*picked))
 
     def _zone(self, wall: Expression) -> Expression:
         q = self.question
@@ -299,80 +379,70 @@ class Statement:
         c = self.question.columns
         return rows.c.loss_text if c.loss else rows.c.error if c.error else rows.c.label
 
-    def _placed(self, since: int | None = None, *, raw: bool = False) -> sa.CTE:
-        """Give each row its place in time, and the kind that follows from id, time and `where` alone."""
-        q, c = self.question, self.question.columns
-        rows = self._timed(since, raw=raw)
-        at = rows.c.at
-        bad_time = at.is_(None)
-        if c.labelled_at:
-            bad_time = sa.or_(bad_time, sa.and_(rows.c.labelled_at_given == 1, rows.c.labelled_at.is_(None)))
-        kinds: list[tuple[Any, int]] = [(condition, OUTSIDE) for condition in self._elsewhere(rows)]
-        kinds.append((at < self._since(), OUTSIDE))
-        if q.at_given:
-            kinds.append((at >= q.now, OUTSIDE))
+    def _placed(self, since: int | None = None, *, gather: bool = False, among: bool | None = None) -> sa.CTE:
+        """Give each row the kind that follows from its times, `where` and its having an id; `n` rows are alike."""
+        c = self.question.columns
+        gather = gather and not self.raw and not c.cluster
+        rows = self._moments(self._timed(self._exact(since, gathered=gather, among=among)))
+        rows = self._texts(self._gathered(rows) if gather else rows)
+        kinds: list[tuple[Any, Any]] = [(condition, OUTSIDE) for condition in self._elsewhere(rows)]
+        kinds.append((rows.c.moment == OUTSIDE, OUTSIDE))
         kinds += self._reason("no-id", rows.c.id.is_(None)) if c.id else []
-        kinds += self._reason("bad-time", bad_time)
-        kinds += self._reason("future-time", at > q.now)
-        picked: list[Expression] = [*rows.c, _kind(kinds), self._local(at).label("bucket")]
-        late: Expression | None = None
-        if c.labelled_at:
-            after = rows.c.labelled_at
-            late = sa.or_(after >= q.now, self._local(after - q.label_lag) > self._local(at))
-            picked.append(sa.case((late, 1), else_=0).label("late"))
-        if c.labelled_at or q.at_given:
-            later = [at >= q.now, *([rows.c.labelled_at >= q.now] if c.labelled_at else [])]
-            picked.append(sa.case((sa.or_(*later), 1), else_=0).label("ahead"))
-        unlabelled = [late] if late is not None else []
+        kinds.append((rows.c.moment != USABLE, rows.c.moment))
+        unlabelled = [rows.c.late == 1] if c.labelled_at else []
         if c.selected:
             unlabelled.append(sa.func.coalesce(rows.c.selected, "").not_in(_TRUE))
         outcome = self._outcome_raw(rows)
-        picked.append((sa.case((sa.or_(*unlabelled), None), else_=outcome) if unlabelled else outcome).label("outcome"))
-        return sa.select(*picked).cte(f"{self.prefix}placed")
+        if unlabelled:
+            outcome = sa.case((sa.or_(*unlabelled), None), else_=outcome)
+        kept = [column for column in rows.c if column.name != "moment"]
+        number = [] if gather else [sa.literal_column("1", sa.BigInteger()).label("n")]
+        return self._stage("placed", sa.select(*kept, *number, _kind(kinds), outcome.label("outcome")))
 
     def _reason(self, reason: str, condition: Expression) -> list[tuple[Any, int]]:
         """One branch of `kind`; tests take branches away here to see that their absence is noticed."""
         return [(condition, kind_of(reason))]
 
-    def _ranked(self, *, raw: bool) -> sa.CTE:
+    def _ranked(self) -> sa.CTE:
         """Leave one row of each id usable: in time before late, the highest revision, and nothing if the rest disagrees."""
-        placed = self._placed(raw=raw)
         c = self.question.columns
         if not c.id or self.unique:
-            return placed
-        alone: Expression = placed.c.kind != USABLE
-        live = replace(self, prefix="live_")._placed(self._since(), raw=raw)
-        among: Expression = live.c.kind == USABLE
+            return self._placed(gather=True)
+        live_ = replace(self, prefix="live_")
         if self.suspects is not None:
-            digests = sa.select(self.suspects.c.digest)
-            alone = sa.or_(alone, dialects.Digest(placed.c.id).not_in(digests))
-            among = sa.and_(among, dialects.Digest(live.c.id).in_(digests))
-        some = sa.select(live).where(among).cte(f"{self.prefix}some")
+            alone, live = self._placed(gather=True, among=False), live_._placed(among=True)
+            others = [
+                sa.select(alone),
+                sa.select(*[live.c[column.name] for column in alone.c]).where(live.c.kind != USABLE),
+            ]
+        else:
+            alone, live = self._placed(gather=True), live_._placed(self._since())
+            others = [sa.select(alone).where(alone.c.kind != USABLE)]
+        some = self._stage("some", sa.select(live).where(live.c.kind == USABLE))
         order = self._order(some)
-        rank = (sa.func.rank().over(partition_by=some.c.id, order_by=order) if order else sa.literal_column("1")).label(
-            "rank"
-        )
-        says = self._says(some).label("says")
-        first = sa.select(*some.c, rank, says).cte(f"{self.prefix}first")
+        rank = sa.func.rank().over(partition_by=some.c.id, order_by=order) if order else sa.literal_column("1")
+        first = self._stage("first", sa.select(*some.c, rank.label("rank"), self._says(some).label("says")))
         group = [first.c.id, first.c.rank]
         rest = [
             sa.func.coalesce(sa.cast(first.c[name], sa.Text), "")
             for name in self._parts()
             if name not in ("id", "revision")
         ]
-        second = sa.select(
-            *first.c,
-            sa.func.row_number().over(partition_by=group, order_by=[first.c.says, *rest]).label("n"),
-            sa.func.min(first.c.says).over(partition_by=group).label("least"),
-            sa.func.max(first.c.says).over(partition_by=group).label("most"),
-        ).cte(f"{self.prefix}second")
-        kinds: list[tuple[Any, int]] = [(second.c.rank > 1, DUPLICATE)]
+        second = self._stage(
+            "second",
+            sa.select(
+                *first.c,
+                sa.func.row_number().over(partition_by=group, order_by=[first.c.says, *rest]).label("number"),
+                sa.func.min(first.c.says).over(partition_by=group).label("least"),
+                sa.func.max(first.c.says).over(partition_by=group).label("most"),
+            ),
+        )
+        kinds: list[tuple[Any, Any]] = [(second.c.rank > 1, DUPLICATE)]
         kinds += self._reason("conflicting-duplicate", second.c.least != second.c.most)
-        kinds.append((second.c.n > 1, DUPLICATE))
-        names = [column.name for column in placed.c if column.name != "kind"]
-        ranked = sa.select(*[second.c[name] for name in names], _kind(kinds))
-        others = sa.select(*[placed.c[name] for name in names], placed.c.kind).where(alone)
-        return sa.union_all(ranked, others).cte(f"{self.prefix}ranked")
+        kinds.append((second.c.number > 1, DUPLICATE))
+        kind = _kind(kinds)
+        ranked = sa.select(*[kind if column.name == "kind" else second.c[column.name] for column in alone.c])
+        return self._stage("ranked", sa.union_all(ranked, *others))
 
     def _order(self, rows: sa.CTE) -> list[Expression]:
         order: list[Expression] = [rows.c.late] if self.question.columns.labelled_at else []
@@ -396,9 +466,9 @@ class Statement:
             joined = joined.op("||")(sa.literal_column("'|'")).op("||")(part)
         return joined
 
-    def _judged(self, *, raw: bool = False) -> sa.CTE:
+    def _judged(self) -> sa.CTE:
         """Give what is still usable the reasons that follow from its values; every kind is final after this."""
-        rows = self._ranked(raw=raw)
+        rows = self._ranked()
         q, c = self.question, self.question.columns
         kinds: list[tuple[Any, Any]] = [(rows.c.kind != USABLE, rows.c.kind)]
         labelled = rows.c.outcome.is_not(None)
@@ -444,7 +514,7 @@ class Statement:
         usable = judged.c.kind == USABLE
         group = [judged.c.cluster]
         began = sa.func.min(judged.c.at).over(partition_by=group).label("began")
-        some = sa.select(*judged.c, began).where(usable).cte(f"{self.prefix}some")
+        some = sa.select(*judged.c, began).where(usable).cte(f"{self.prefix}members")
         inside = some.c.at <= some.c.began + q.cluster_span
         flags = self._flags(some, some.c.outcome.is_not(None))
         size = (
@@ -483,7 +553,8 @@ class Statement:
         flat = sa.select(
             *keys,
             sa.case((usable, rows.c.cluster)).label("cluster"),
-            *[flag.label(name) for name, flag in sums.items()],
+            rows.c.n,
+            *[(flag * rows.c.n).label(name) for name, flag in sums.items()],
             sa.case((labelled, rows.c.at)).label("newest"),
             *ahead,
         ).cte(f"{self.prefix}flat")
@@ -502,7 +573,9 @@ class Statement:
         wrong = {"miss": "misses", "false-alarm": "false_alarms"}.get(self.question.measure, "errors")
         size = self._size({name: one.c[name] for name in sums})
         level = sa.cast(size, sa.Text).op("||")(sa.literal_column("':'")).op("||")(sa.cast(one.c[wrong], sa.Text))
-        leveled = sa.select(*one.c, sa.case((one.c.kind == USABLE, level), else_="").label("level")).cte(f"{self.prefix}leveled")
+        leveled = sa.select(*one.c, sa.case((one.c.kind == USABLE, level), else_="").label("level")).cte(
+            f"{self.prefix}leveled"
+        )
         group = [leveled.c[key.name] for key in keys] + [leveled.c.level]
         return sa.select(
             *group,
@@ -557,9 +630,9 @@ def _sum(column: Expression, name: str) -> sa.Label[Any]:
     return sa.cast(sa.func.sum(column), sa.BigInteger).label(name)
 
 
-def _kind(kinds: Sequence[tuple[Any, Any]]) -> sa.Label[Any]:
+def _kind(kinds: Sequence[tuple[Any, Any]], name: str = "kind") -> sa.Label[Any]:
     kind: Expression = sa.case(*kinds, else_=USABLE) if kinds else sa.literal(USABLE)
-    return kind.label("kind")
+    return kind.label(name)
 
 
 def _stepwise(x: Expression, pieces: Sequence[tuple[int, int | None]]) -> Expression:

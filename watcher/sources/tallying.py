@@ -10,9 +10,9 @@ import sqlalchemy as sa
 
 from watcher.buckets import bucket_starts, local_start
 from watcher.errors import SourceFailed, UsageError
-from watcher.records import INTEGERS, CellCounts, Counts, Question, Tally
+from watcher.records import INTEGERS, CellCounts, Counts, Question, RejectedRow, Tally
 from watcher.sources.normal import number_of
-from watcher.sources.statement import DUPLICATE, OUTSIDE, USABLE, Statement, reason_of
+from watcher.sources.statement import DUPLICATE, OUTSIDE, USABLE, Statement, parts_of, reason_of
 
 Run = Callable[[sa.Select[Any]], Iterable[Any]]
 """Executes a SELECT and yields rows with named columns, as they come."""
@@ -121,6 +121,14 @@ def answer(statement: Statement, run: Run, source: str, slice_limit: int, sample
     if q.columns.labelled_at and q.open_from > q.released:
         late = next(iter(run(statement.late_labels())))[0]
     return fold.tally(late)
+
+
+def rejected_row(q: Question, reason: str, place: str, line: int | None, row: Any, *, keep: bool) -> RejectedRow:
+    """Return a row of `rejected_rows` with its values by column; `keep` = False leaves out what may be personal."""
+    if not keep:
+        return RejectedRow(q.promise, reason, place, line, None, {})
+    values = {name: None if value is None else str(value) for name, value in zip(parts_of(q), row, strict=False)}
+    return RejectedRow(q.promise, reason, place, line, values[q.columns.id] if q.columns.id else None, values)
 
 
 def _sizes(statement: Statement, run: Run, sample: int | None) -> list[int]:
