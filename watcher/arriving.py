@@ -59,7 +59,7 @@ def advance_path(before: Mapping[int, Pair], now: Mapping[int, Pair], steps: Seq
     kept = list(steps)
     base = dict(before)
     for step in kept:
-        n, k = base[step.bucket]
+        n, k = base.get(step.bucket, (0, 0))
         base[step.bucket] = (n - step.labels, k - step.errors)
     first, amended = len(kept), False
     new: list[Step] = []
