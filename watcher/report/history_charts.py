@@ -241,26 +241,30 @@ def _ends(wanted: list[tuple[float, str, str]], frame: _Frame, y: Spec, top: flo
 def _marks(breach: Breach, frame: _Frame) -> list[Spec]:
     """The likeliest start of a breach and the crossing: thin rules, named above the plot on two lines."""
     theme, zone = THEMES[frame.scheme], frame.terms.time_zone
-    made: list[Spec] = []
     marked = (
         (breach.since, f"likeliest start {day(breach.since, zone)}", [2, 3]),
         (breach.at, f"total crosses with {last(breach.at, zone)}", [1, 0]),
     )
+    rules: list[Spec] = []
+    names: list[Spec] = []
+    x = {**frame.x, "field": "t"}
     for row, (moment, text, dash) in enumerate(marked):
-        at = frame.at(moment)
-        right = (at - frame.first) > 0.6 * (frame.last - frame.first)
-        x = {**frame.x, "field": "t"}
-        made.append(
+        at, high = frame.at(moment), -MARGIN + 8 + 12 * row
+        rules.append(
             {
                 "data": inline([{"t": at}]),
                 "mark": {"type": "rule", "color": theme.ink, "strokeWidth": 1, "strokeDash": dash},
-                "encoding": {"x": x, "y": fixed(-MARGIN + 4 + 12 * row), "y2": fixed(frame.height)},
+                "encoding": {"x": x, "y": fixed(high - 4), "y2": fixed(frame.height)},
             }
         )
-        place = label(text, x=x, y=fixed(-MARGIN + 8 + 12 * row), colour=theme.ink, align="right" if right else "left")
-        place["mark"]["dx"] = -4 if right else 4
-        made.append({**place, "data": inline([{"t": at, "label": text}])})
-    return made
+        right = (at - frame.first) > 0.6 * (frame.last - frame.first)
+        side, shift = ("right", -4) if right else ("left", 4)
+        # The halo keeps the name legible where it lies over the other rule.
+        for colour, stroke in ((theme.paper, 4), (theme.ink, 0)):
+            place = label(text, x=x, y=fixed(high), colour=colour, align=side, dx=shift)
+            place["mark"] |= {"stroke": theme.paper, "strokeWidth": stroke, "strokeJoin": "round"} if stroke else {}
+            names.append({**place, "data": inline([{"t": at, "label": text}])})
+    return [*rules, *names]
 
 
 _BOUND_TIPS: Final = (

@@ -156,14 +156,18 @@ def _week(figures: WeekFigures, terms: Terms) -> dict[str, Any]:
         "status": "final" if figures.final else "provisional",
         "due": numbers.day(figures.end + timedelta(seconds=terms.label_lag), terms.time_zone),
         "predictions": f"{figures.predictions:,}",
-        "share": _NOTHING if share is None else numbers.percent(share),
+        "share": _NOTHING if share is None else numbers.percent(share, decimals=1),
         "labels": f"{figures.labels:,}",
         "errors": numbers.amount(figures.errors),
-        "estimate": _NOTHING if figures.estimate is None else numbers.percent(figures.estimate),
+        "estimate": _rate(figures.estimate, terms.tolerance),
         "interval": _interval(figures.interval),
         "exact": _interval(figures.exact),
         "revised": figures.was is not None,
     }
+
+
+def _rate(value: float | None, tolerance: float) -> str:
+    return _NOTHING if value is None else numbers.percent(value, decimals=numbers.decimals_for(tolerance))
 
 
 def _interval(interval: Interval | None) -> str:
@@ -178,7 +182,7 @@ def _standing(cell: CellReport) -> dict[str, Any]:
         "flags": ", ".join(standing.flags),
         "labels": f"{standing.labels:,}",
         "errors": numbers.amount(standing.errors),
-        "estimate": _NOTHING if standing.estimate is None else numbers.percent(standing.estimate),
+        "estimate": _rate(standing.estimate, standing.tolerance),
         "life": _interval(standing.life),
         "recent": _NOTHING if recent is None else numbers.span(recent.lower, recent.upper),
         "recent_counts": _NOTHING if recent is None else f"{numbers.amount(recent.errors)} in {recent.labels:,}",

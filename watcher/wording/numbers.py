@@ -156,6 +156,11 @@ def _zone(zone: str | tzinfo) -> tzinfo:
     return ZoneInfo(zone) if isinstance(zone, str) else zone
 
 
+def decimals_for(scale: float) -> int:
+    """Decimals of percentages in a column of rates about as large as `scale`, so that its figures align."""
+    return _places(Decimal(repr(float(scale))) * 100, 2)
+
+
 def _places(number: Decimal, significant: int) -> int:
     if number <= 0:
         return 1
