@@ -9,10 +9,10 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING, Any
 
-__all__ = ["confidence_bounds", "evidence", "exact_bounds", "operating_characteristics"]
+__all__ = ["certify", "confidence_bounds", "evidence", "exact_bounds", "operating_characteristics"]
 
 if TYPE_CHECKING:
-    from watcher.bounds.face import confidence_bounds, evidence, exact_bounds, operating_characteristics
+    from watcher.bounds.face import certify, confidence_bounds, evidence, exact_bounds, operating_characteristics
 
 
 def __getattr__(name: str) -> Any:

@@ -478,7 +478,8 @@ def _close(ledger: Ledger, old: StoredTerm, new: Terms, now: int) -> tuple[TermD
         closed=True,
     )
     breaches = sorted({s.breach.number for s in verdict.standings if s.breach})
-    facts = {"by": new.version, "released": moment(new.released).isoformat(), "answers_breaches": breaches}
+    facts: dict[str, Any] = {"by": new.version, "released": moment(new.released).isoformat()}
+    facts |= {"breach": breaches[-1]} if breaches else {}
     return draft, [Event("superseded", terms.promise, terms.version, "", "", None, facts), *verdict.events]
 
 
@@ -647,7 +648,14 @@ def acknowledge(ledger: Ledger, promise: str, version: str, number: int, who: st
         known = ", ".join(map(str, sorted(numbers))) or "none"
         raise UsageError(f"promise {promise!r} version {version!r}: breach {number} does not stand; standing: {known}")
     source = stored[0].terms.source
-    facts = {"number": number, "who": who.strip()[:200], "why": why.strip()[:2000]}
+    raised = [
+        stored_event
+        for stored_event in ledger.events(promise=promise, kinds=("breach",), limit=100_000)
+        if stored_event.event.version == version and stored_event.event.facts.get("number") == number
+    ]
+    facts: dict[str, Any] = {"number": number, "who": who.strip()[:200], "note": why.strip()[:2000]}
+    if raised:
+        facts |= {"look": raised[-1].look, "event": raised[-1].n}
     entry = Entry(
         source=source,
         at=max(now, ledger.newest_at()),

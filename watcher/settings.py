@@ -25,7 +25,11 @@ from watcher.records import EVENTS, Columns, Counting, Measure, Slice, Terms
 
 _UNITS: Final = {"s": 1, "m": 60, "h": 3600, "d": 86400, "w": 604800}
 BUCKETS: Final = ("1h", "2h", "3h", "4h", "6h", "8h", "12h", "1d")
-DEFAULT_EVENTS: Final = tuple(event for event in EVENTS if event not in ("labels-resumed", "source-restored"))
+DEFAULT_EVENTS: Final = (
+    *(event for event in EVENTS if event not in ("labels-resumed", "source-restored")),
+    "reminder",
+    "report",
+)
 MAX_LEVELS: Final = 16
 RAW: Final = ConfigDict(extra="forbid", frozen=True, strict=False, populate_by_name=True, arbitrary_types_allowed=True)
 

@@ -10,8 +10,9 @@ from watcher.bounds.evidence import evidence as evidence_of_statistics
 from watcher.bounds.evidence import lower_limit, upper_limit
 from watcher.bounds.exact import Bounds, exact_bounds, operating_characteristics
 from watcher.bounds.mixture import Floats, Side
+from watcher.bounds.release import certify
 
-__all__ = ["confidence_bounds", "evidence", "exact_bounds", "operating_characteristics"]
+__all__ = ["certify", "confidence_bounds", "evidence", "exact_bounds", "operating_characteristics"]
 
 
 def evidence(labels: ArrayLike, errors: ArrayLike, rate: ArrayLike, side: Side = "above") -> Floats:

@@ -51,6 +51,14 @@ def read(connection: Connection, promise: str) -> tuple[dict[str, int], list[Rej
     return counts, samples
 
 
+def counts(connection: Connection) -> dict[str, dict[str, int]]:
+    """Promise -> reason -> rows of its newest look."""
+    found: dict[str, dict[str, int]] = {}
+    for row in connection.execute(select(REJECT_COUNT)):
+        found.setdefault(row.promise, {})[row.reason] = int(row.rows)
+    return found
+
+
 def forget(connection: Connection, promise: str | None) -> int:
     """Delete the samples of a promise, or all; how many rows these were. The counts stay."""
     statement = delete(REJECT)

@@ -260,6 +260,11 @@ class Ledger:
         with self.reading() as connection:
             return rejects.read(connection, promise)
 
+    def reject_counts(self) -> dict[str, dict[str, int]]:
+        """Promise -> reason -> rows the newest look saw, of all promises."""
+        with self._reading() as connection:
+            return rejects.counts(connection)
+
     # --- the outbox
 
     def waiting(self, route: str, now: datetime, *, limit: int = 1000) -> list[Notice]:
@@ -295,6 +300,20 @@ class Ledger:
         """Write down what came of a try; `next_at` None leaves it. Raises UsageError for an unknown notice."""
         with self.writing() as connection:
             outbox.record(connection, route, key, state=state, answer=answer, next_at=next_at, tries=tries)
+
+    def record_answers(self, notices: Iterable[Notice]) -> None:
+        """Write down what came of a message, for all its notices at once. Raises UsageError for an unknown notice."""
+        with self._writing() as connection:
+            for one in notices:
+                outbox.record(
+                    connection,
+                    one.route,
+                    one.key,
+                    state=one.state,
+                    answer=one.answer,
+                    next_at=one.next_at,
+                    tries=one.tries,
+                )
 
     def add_notices(self, notices: Iterable[Notice]) -> int:
         """Write heartbeats, reminders, reports (keys.period_key); one whose route and key is known is left out."""

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass, field
-from datetime import datetime
 from typing import Any, Final, Protocol
 
 from watcher.records import CellCounts, Head, Notice, Standing, StoredEvent, StoredTerm, Terms
@@ -43,9 +42,7 @@ class Store(Protocol):
         self, *, route: str | None = None, state: str | None = None, promise: str | None = None, limit: int = 100
     ) -> list[Notice]: ...
 
-    def record_answer(  # noqa: D102
-        self, route: str, key: str, *, state: str, answer: str | None, next_at: datetime | None, tries: int
-    ) -> None: ...
+    def record_answers(self, notices: Iterable[Notice]) -> None: ...  # noqa: D102
 
 
 @dataclass(frozen=True, slots=True)
@@ -86,16 +83,8 @@ class Booked:
         return self.message_key(self.ledger_id, route, look)
 
     def settle(self, notices: Sequence[Notice]) -> None:
-        """Record what became of these notices. One by one: after a crash in between the rest goes out again, same id."""
-        for notice in notices:
-            self.store.record_answer(
-                notice.route,
-                notice.key,
-                state=notice.state,
-                answer=notice.answer,
-                next_at=notice.next_at,
-                tries=notice.tries,
-            )
+        """Record what became of these notices, in one transaction."""
+        self.store.record_answers(notices)
 
     def head(self) -> Head:
         """The newest look with the digest of the chain up to it."""

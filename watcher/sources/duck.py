@@ -86,7 +86,7 @@ class Duck:
         sql, values = text_of_statement(select)
         with self._told():
             cursor = self._connection.execute(sql, values)
-        row_type = namedtuple("Row", [column[0] for column in cursor.description], rename=True)  # type: ignore[misc]  # noqa: PYI024
+        row_type = namedtuple("Row", [column[0] for column in cursor.description], rename=True)  # type: ignore[misc]
         while True:
             with self._told():
                 rows = cursor.fetchmany(_FETCH)
