@@ -23,8 +23,15 @@ class _Group(click.Group):
         "status": "watcher.cli.status:status",
         "explain": "watcher.cli.explain:explain",
         "bounds": "watcher.cli.bounds:bounds",
+        "certify": "watcher.cli.certify:certify",
         "rejects": "watcher.cli.rejects:rejects",
         "audit": "watcher.cli.audit:audit",
+        "acknowledge": "watcher.cli.acknowledge:acknowledge",
+        "notices": "watcher.cli.notices:notices",
+        "export": "watcher.cli.export:export",
+        "backup": "watcher.cli.backup:backup",
+        "upgrade": "watcher.cli.upgrade:upgrade",
+        "token": "watcher.cli.token:token",
         "demo": "watcher.cli.demo:demo",
     }
 
