@@ -24,6 +24,7 @@ class _Group(click.Group):
         "explain": "watcher.cli.explain:explain",
         "bounds": "watcher.cli.bounds:bounds",
         "certify": "watcher.cli.certify:certify",
+        "risk": "watcher.cli.risk:risk",
         "rejects": "watcher.cli.rejects:rejects",
         "audit": "watcher.cli.audit:audit",
         "acknowledge": "watcher.cli.acknowledge:acknowledge",
