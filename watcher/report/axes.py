@@ -22,20 +22,31 @@ def wall(moment: datetime, zone: str) -> int:
 
 
 def time_axis(first: int, last: int) -> Spec:
-    """An x axis from `first` to `last` (wall milliseconds)."""
+    """An x axis labelled for the span from `first` to `last` (wall milliseconds); `reach` makes it that long."""
     span = last - first
-    months = "%b %Y" if span >= _YEAR_MS else "%-d %b"
     return {
         "field": "t",
         "type": "temporal",
         "title": None,
-        "scale": {"type": "utc", "domain": [first, max(last, first + 1)], "nice": False},
+        "scale": {"type": "utc", "nice": False},
         "axis": {
-            "format": months,
+            "format": "%b %Y" if span >= _YEAR_MS else "%-d %b",
             "tickCount": {"interval": "month", "step": 1} if _MONTHS_MS * 2 < span < _YEAR_MS else 6,
             "labelOverlap": True,
             "labelFlush": True,
         },
+    }
+
+
+def reach(first: int, last: int, x: Spec) -> Spec:
+    """A layer that draws nothing and makes the time axis reach from `first` to `last`.
+
+    A domain given as times is not united with the data of other layers (browsers complain, the plot collapses).
+    """
+    return {
+        "data": {"values": [{"t": first}, {"t": max(last, first + 1)}]},
+        "mark": {"type": "point", "opacity": 0, "size": 0, "tooltip": None},
+        "encoding": {"x": x},
     }
 
 

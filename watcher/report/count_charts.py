@@ -9,7 +9,7 @@ from typing import Any, Final
 from zoneinfo import ZoneInfo
 
 from watcher.records import CellCounts, Terms
-from watcher.report.axes import fixed, number_axis, rate_axis, time_axis
+from watcher.report.axes import fixed, number_axis, rate_axis, reach, time_axis
 from watcher.report.snapshot import DayStanding
 from watcher.report.theme import THEMES, Scheme, Spec, chart, inline, label, limit_rule, tips_layer
 from watcher.wording import percent, rate
@@ -102,30 +102,20 @@ def labels(
     x, y = time_axis(first, last), number_axis(0, top, form="~s")
     to = {"field": "t2"}
     gap = 0.0 if len(rows) > 200 else 1.0
-    bar = {"type": "bar", "x2Offset": -gap, "tooltip": None}
-    counted = {
-        "field": "sealed",
-        "type": "nominal",
-        "legend": None,
-        "scale": {"domain": [True, False], "range": [0.9, 0.45]},
-    }
+    bar = {"type": "bar", "x2Offset": -gap}
+    floor = fixed(height)
     layers: list[Spec] = [
         {
-            "data": inline(rows),
-            "mark": {**bar, "color": theme.muted, "opacity": 0.3},
-            "encoding": {"x": x, "x2": to, "y": {**y, "field": "predictions", "stack": None}, "y2": {"datum": 0}},
-        },
-        {
-            "data": inline(rows),
-            "mark": {**bar, "color": theme.accent},
-            "encoding": {
-                "x": x,
-                "x2": to,
-                "y": {**y, "field": "labels", "stack": None},
-                "y2": {"datum": 0},
-                "opacity": counted,
-            },
-        },
+            "data": inline(those),
+            "mark": {**bar, "color": colour, "opacity": opacity},
+            "encoding": {"x": x, "x2": to, "y": {**y, "field": field, "stack": None}, "y2": floor},
+        }
+        for field, those, colour, opacity in (
+            ("predictions", rows, theme.muted, 0.3),
+            ("labels", [row for row in rows if row["sealed"]], theme.accent, 0.9),
+            ("labels", [row for row in rows if not row["sealed"]], theme.accent, 0.45),
+        )
+        if those
     ]
     late = [row for row in rows if row["late"]]
     if late:
@@ -136,10 +126,11 @@ def labels(
                 "encoding": {"x": x, "y": {**y, "field": "late"}},
             }
         )
+    layers.insert(0, reach(first, last, x))
     layers += _key(per, bool(late), scheme)
-    if tips:
+    if tips and rows:
         fields = (
-            ("day", per, None),
+            ("t", per if step == 1 else "week from", None),
             ("predictions", "predicted", ",d"),
             ("labels", "labelled", ",d"),
             ("late", "late, not counted", ",d"),
@@ -221,7 +212,7 @@ def weeks(
     }
     shown = [row for row in rows if row["rate"] is not None]
     layers: list[Spec] = [
-        {"data": inline(rows), "mark": {"type": "point", "opacity": 0}, "encoding": {"x": x, "y": {**y, "datum": 0}}},
+        {"data": inline(rows), "mark": {"type": "point", "opacity": 0}, "encoding": {"x": x, "y": fixed(height)}},
         {
             "data": inline([row for row in rows if row["final"]]),
             "mark": {"type": "bar", "color": theme.accent, "opacity": 1.6 * theme.band, "width": {"band": 0.5}},

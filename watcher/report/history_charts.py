@@ -4,15 +4,16 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from datetime import UTC, datetime
+from datetime import UTC, datetime, timedelta
 from typing import Any, Final
 
 from watcher.records import Breach, Standing, Terms
-from watcher.report.axes import apart, fixed, number_axis, rate_axis, time_axis, wall
+from watcher.report.axes import apart, fixed, number_axis, rate_axis, reach, time_axis, wall
 from watcher.report.snapshot import DayStanding
 from watcher.report.theme import MARGIN, THEMES, Scheme, Spec, chart, inline, label, limit_rule, tips_layer
 from watcher.text import safe
-from watcher.wording import day, headline, last, name, nats, percent, rate
+from watcher.wording import headline, name, nats, percent, rate
+from watcher.wording.numbers import short
 
 _SPACE: Final = 13
 """Pixels between two labels at the end of lines."""
@@ -62,6 +63,7 @@ def bounds(
     values = [_bound_row(row.standing, terms) for row in shown]
     y = rate_axis(top)
     layers: list[Spec] = [
+        reach(frame.first, frame.last, frame.x),
         {
             "data": inline(values),
             "mark": {"type": "area", "interpolate": "step-after", "color": theme.accent, "opacity": theme.band},
@@ -78,7 +80,7 @@ def bounds(
     if tips:
         layers.append(tips_layer(values, frame.x, {**y, "field": "rate"}, _BOUND_TIPS, scheme))
     told = f"Limits since the release over time; {headline(newest, terms)}." if newest else "Nothing counted yet."
-    return chart(layers, width=width, height=height, scheme=scheme, description=safe(told, 200))
+    return chart(_filled(layers), width=width, height=height, scheme=scheme, description=safe(told, 200))
 
 
 def total(
@@ -99,6 +101,7 @@ def total(
     top = max([1.2 * bar, 1.0, *(1.05 * row["total"] for row in values)])
     y = number_axis(low, top)
     layers = [
+        reach(frame.first, frame.last, frame.x),
         _line(values, frame, {**y, "field": "total"}, theme.accent),
         *(limit_rule(bar, f"broken from {nats(bar)} nats on", y, scheme) if shown else []),
     ]
@@ -109,7 +112,7 @@ def total(
     if tips:
         layers.append(tips_layer(values, frame.x, {**y, "field": "total"}, _TOTAL_TIPS, scheme))
     told = f"Total {nats(newest.total)} of {nats(bar)} nats." if newest else "Nothing counted yet."
-    return chart(layers, width=width, height=height, scheme=scheme, description=told)
+    return chart(_filled(layers), width=width, height=height, scheme=scheme, description=told)
 
 
 def slices(
@@ -178,7 +181,7 @@ def _bound_row(standing: Standing, terms: Terms) -> dict[str, Any]:
     assert standing.counted_until is not None
     return {
         "t": wall(standing.counted_until, terms.time_zone),
-        "day": last(standing.counted_until, terms.time_zone),
+        "day": wall(standing.counted_until, terms.time_zone) - 1000,
         "low": _short(standing.life.lower),
         "high": _short(standing.life.upper),
         "rate": None if standing.estimate is None else _short(standing.estimate),
@@ -191,11 +194,16 @@ def _total_row(standing: Standing, terms: Terms) -> dict[str, Any]:
     assert standing.counted_until is not None
     return {
         "t": wall(standing.counted_until, terms.time_zone),
-        "day": last(standing.counted_until, terms.time_zone),
+        "day": wall(standing.counted_until, terms.time_zone) - 1000,
         "total": round(max(standing.total, _DEEPEST), 4),
         "threshold": round(standing.threshold, 4),
         "labels": standing.labels,
     }
+
+
+def _filled(layers: list[Spec]) -> list[Spec]:
+    """Layers that have something to draw: a browser's console complains of the others."""
+    return [layer for layer in layers if layer["data"]["values"]]
 
 
 def _short(value: float) -> float:
@@ -242,8 +250,8 @@ def _marks(breach: Breach, frame: _Frame) -> list[Spec]:
     """The likeliest start of a breach and the crossing: thin rules, named above the plot on two lines."""
     theme, zone = THEMES[frame.scheme], frame.terms.time_zone
     marked = (
-        (breach.since, f"likeliest start {day(breach.since, zone)}", [2, 3]),
-        (breach.at, f"total crosses with {last(breach.at, zone)}", [1, 0]),
+        (breach.since, f"likeliest start {short(breach.since, zone)}", [2, 3]),
+        (breach.at, f"total crosses {short(breach.at - timedelta(seconds=1), zone)}", [1, 0]),
     )
     rules: list[Spec] = []
     names: list[Spec] = []
@@ -306,6 +314,7 @@ def _small(
         "width": width,
         "height": height,
         "layer": [
+            reach(frame.first, frame.last, x),
             {
                 "data": inline(values),
                 "mark": {"type": "area", "interpolate": "step-after", "color": theme.accent, "opacity": theme.band},
@@ -323,9 +332,9 @@ def _small(
                 "encoding": {"x": x, "y": {**y, "field": "rate"}},
             },
             {
-                "data": inline([{}]),
+                "data": inline([{"value": terms.tolerance}]),
                 "mark": {"type": "rule", "color": theme.ink, "strokeDash": [4, 3], "strokeWidth": 0.8},
-                "encoding": {"y": {**y, "datum": terms.tolerance}},
+                "encoding": {"y": {**y, "field": "value"}},
             },
         ],
     }

@@ -108,26 +108,33 @@ def label(text: str, *, x: Spec, y: Spec, colour: str, align: str = "left", dx: 
 def limit_rule(value: float, text: str, y: Spec, scheme: Scheme) -> list[Spec]:
     """A dashed rule across the chart, named at its left end with a halo that keeps the name legible over what is below."""
     theme = THEMES[scheme]
-    place = {**y, "datum": value}
+    # A field and not a datum: the language looks for the extent of a datum in vain and complains in the browser's console.
+    place = {**y, "field": "value"}
+    rows = [{"value": value, "label": text}]
     rule = {
-        "data": inline([{}]),
+        "data": inline(rows),
         "mark": {"type": "rule", "color": theme.ink, "strokeDash": [5, 4], "strokeWidth": 1},
         "encoding": {"y": place},
     }
-    halo = label(text, x={"value": 4}, y=place, colour=theme.paper, dy=-8)
-    halo["mark"] |= {"stroke": theme.paper, "strokeWidth": 4, "strokeJoin": "round"}
-    return [rule, halo, label(text, x={"value": 4}, y=place, colour=theme.ink, dy=-8)]
+    named = [
+        label(text, x={"value": 4}, y=place, colour=theme.paper, dy=-8),
+        label(text, x={"value": 4}, y=place, colour=theme.ink, dy=-8),
+    ]
+    named[0]["mark"] |= {"stroke": theme.paper, "strokeWidth": 4, "strokeJoin": "round"}
+    return [rule, *({**each, "data": inline(rows)} for each in named)]
 
 
 def tips_layer(
     values: list[dict[str, Any]], x: Spec, y: Spec, fields: Sequence[tuple[str, str, str | None]], scheme: Scheme
 ) -> Spec:
-    """Points that show themselves and their figures where the pointer is nearest; (field, title, format) each."""
+    """Points that show themselves and their figures where the pointer is nearest; (field, title, format) each, no format for a day."""
     tooltip: list[Spec] = []
     for field, title, form in fields:
-        # A date is sent as text: a time would be told in the zone of whoever looks.
         tip = {"field": field, "title": title}
-        tooltip.append({**tip, "type": "nominal"} if form is None else {**tip, "type": "quantitative", "format": form})
+        # A unit in UTC keeps the day that of the promise's zone, wherever the reader is. (Text would be the plain way, but
+        # the nearest point's text fields come out undefined.)
+        when = {"type": "temporal", "timeUnit": "utcyearmonthdate", "format": "%-d %B %Y"}
+        tooltip.append(tip | (when if form is None else {"type": "quantitative", "format": form}))
     near: Spec = {"type": "point", "fields": ["t"], "nearest": True, "on": "pointermove", "clear": "pointerout"}
     return {
         "data": inline(values),

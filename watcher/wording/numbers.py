@@ -117,6 +117,12 @@ def day(moment: datetime, zone: str | tzinfo) -> str:
     return f"{local.day} {MONTHS[local.month - 1]} {local.year}"
 
 
+def short(at: datetime, zone: str | tzinfo) -> str:
+    """The date of a moment in a zone where there is little room: "29 Nov 2026"."""
+    local = at.astimezone(_zone(zone))
+    return f"{local.day} {MONTHS[local.month - 1][:3]} {local.year}"
+
+
 def moment(at: datetime, zone: str | tzinfo) -> str:
     """Date and time of a moment in a zone: "29 November 2026, 06:00"; midnight is left out."""
     local = at.astimezone(_zone(zone))
