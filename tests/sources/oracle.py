@@ -38,7 +38,9 @@ def number(value: str | None) -> float | None:
 
 def instant(value: str | None, zone: str | None) -> int | None:
     value = (value or "").strip(" \t\r\n")
-    match = re.fullmatch(r"(\d{4})-(\d\d)-(\d\d)[T ](\d\d):(\d\d):(\d\d)(?:\.\d{1,9})?([Zz]|[-+]\d\d:\d\d)?", value, re.ASCII)
+    match = re.fullmatch(
+        r"(\d{4})-(\d\d)-(\d\d)[T ](\d\d):(\d\d):(\d\d)(?:\.\d{1,9})?([Zz]|[-+]\d\d:\d\d)?", value, re.ASCII
+    )
     if not match:
         return None
     *parts, offset = match.groups()
@@ -162,16 +164,20 @@ def without_repetitions(found: list[Item], q: Question) -> None:
             for item in top:
                 item.kind = "conflicting-duplicate"
         else:
-            # equal rows may differ in other columns: the one whose other values sort first by bytes stands for all
+            # equal rows may differ in other columns: the one whose other values sort first stands for all
             top.sort(key=lambda item: others(item.row, q))
             for item in top[1:]:
                 item.kind = "duplicate"
 
 
-def others(row: Row, q: Question) -> tuple[bytes, ...]:
+def others(row: Row, q: Question) -> tuple[float | bytes, ...]:
     c = q.columns
+    numbers = [number(row[name]) for name in (c.weight, c.labelling_probability) if name]
     texts = [norm(row[name]) for name in (c.cluster, c.selected) if name]
-    return tuple((text or "").encode() for text in [*texts, *[norm(row[name]) for name in q.slices]])
+    return (
+        *[-1.0 if value is None else value for value in numbers],
+        *[(text or "").encode() for text in [*texts, *[norm(row[name]) for name in q.slices]]],
+    )
 
 
 def judge(found: list[Item], q: Question) -> None:
@@ -186,13 +192,19 @@ def judge(found: list[Item], q: Question) -> None:
         chosen = norm(item.row[c.selected]) if c.selected else None
         if c.error and labelled and item.outcome not in ("0", "1", "true", "false"):
             item.kind = "unknown-label"
-        elif c.label and (item.prediction is None or (classes and not {item.prediction, item.outcome or item.prediction} <= classes)):
+        elif c.label and (
+            item.prediction is None or (classes and not {item.prediction, item.outcome or item.prediction} <= classes)
+        ):
             item.kind = "unknown-label"
         elif c.weight and labelled and weight not in [float(level) for level in q.weight_levels]:
             item.kind = "bad-weight"
         elif c.selected and chosen not in ("0", "1", "true", "false"):
             item.kind = "bad-weight"
-        elif c.selected and chosen in ("1", "true") and chance not in [float(level) for level in q.labelling_probabilities]:
+        elif (
+            c.selected
+            and chosen in ("1", "true")
+            and chance not in [float(level) for level in q.labelling_probabilities]
+        ):
             item.kind = "bad-weight"
         elif c.cluster and norm(item.row[c.cluster]) is None:
             item.kind = "no-cluster"
@@ -295,7 +307,9 @@ def count(rows: Sequence[Row], q: Question) -> dict[str, Any]:
         "rejected": {kind: n for kind, n in kinds.items() if kind not in ("usable", "outside", "duplicate")},
         "duplicates": kinds["duplicate"],
         "outside": kinds["outside"],
-        "late": (len({item.id for item in late if item.id is not None}) if q.columns.id else len(late)) if q.columns.labelled_at else 0,
+        "late": (len({item.id for item in late if item.id is not None}) if q.columns.id else len(late))
+        if q.columns.labelled_at
+        else 0,
     }
 
 
@@ -317,7 +331,10 @@ def told(tally: Tally) -> dict[str, Any]:
     """Return a tally in the oracle's form."""
     return {
         "cells": {
-            (cell.column, cell.value, cell.bucket, cell.level): (*[getattr(cell.counts, name) for name in INTEGERS], cell.counts.newest)
+            (cell.column, cell.value, cell.bucket, cell.level): (
+                *[getattr(cell.counts, name) for name in INTEGERS],
+                cell.counts.newest,
+            )
             for cell in tally.cells
         },
         "rejected": dict(tally.rejected),

@@ -120,7 +120,11 @@ def some_rows(times: list[str | None]) -> st.SearchStrategy[list[Row]]:
 DESIGNS: dict[str, dict[str, object]] = {
     "label": {"columns": {"prediction": "predicted", "label": "observed"}},
     "positive": {"columns": {"prediction": "predicted", "label": "observed"}, "positive": " a", "measure": "miss"},
-    "classes": {"columns": {"prediction": "predicted", "label": "observed"}, "classes": ("a", "b", "1.0"), "positive": "1"},
+    "classes": {
+        "columns": {"prediction": "predicted", "label": "observed"},
+        "classes": ("a", "b", "1.0"),
+        "positive": "1",
+    },
     "error": {"columns": {"error": "wrong"}},
     "loss": {"columns": {"loss": "loss"}, "measure": "loss"},
     "weight": {
@@ -195,7 +199,11 @@ def question(
 
 @st.composite
 def questions(draw: st.DrawFn, typed: bool = False) -> Question:
-    zone, bucket = draw(st.sampled_from([("UTC", 86_400), ("Europe/Berlin", 86_400), ("Europe/Berlin", 3600), ("America/St_Johns", 7200)]))
+    zone, bucket = draw(
+        st.sampled_from(
+            [("UTC", 86_400), ("Europe/Berlin", 86_400), ("Europe/Berlin", 3600), ("America/St_Johns", 7200)]
+        )
+    )
     from watcher.buckets import bucket_starts
 
     starts = bucket_starts(RELEASED, NOW, bucket, zone)

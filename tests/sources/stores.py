@@ -30,7 +30,9 @@ def sqlite_source(path: Path, rows: Sequence[Row], **more: object) -> Source:
     with sqlite3.connect(path) as connection:
         connection.execute(f"CREATE TABLE samples ({', '.join(COLUMNS)})")
         marks = ", ".join("?" for _ in COLUMNS)
-        connection.executemany(f"INSERT INTO samples VALUES ({marks})", [[row[name] for name in COLUMNS] for row in rows])
+        connection.executemany(
+            f"INSERT INTO samples VALUES ({marks})", [[row[name] for name in COLUMNS] for row in rows]
+        )
     connection.close()
     return open_source(SourceSpec("desk", "database", url=f"sqlite:///{path}", table="samples", **more))  # type: ignore[arg-type]
 
@@ -44,5 +46,7 @@ def postgresql_source(url: str, rows: Sequence[Row], **more: object) -> Source:
         connection.execute("DROP TABLE IF EXISTS samples")
         connection.execute(f"CREATE TABLE samples ({columns})")
         marks = ", ".join("%s" for _ in COLUMNS)
-        connection.cursor().executemany(f"INSERT INTO samples VALUES ({marks})", [[row[name] for name in COLUMNS] for row in rows])
+        connection.cursor().executemany(
+            f"INSERT INTO samples VALUES ({marks})", [[row[name] for name in COLUMNS] for row in rows]
+        )
     return open_source(SourceSpec("desk", "database", url=url, table="samples", **more))  # type: ignore[arg-type]

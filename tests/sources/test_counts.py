@@ -17,7 +17,9 @@ from watcher.sources.statement import Statement
 SETTINGS = settings(
     deadline=None,
     max_examples=20,
-    phases=[Phase.explicit, Phase.generate, Phase.shrink], derandomize=True, suppress_health_check=[HealthCheck.function_scoped_fixture, HealthCheck.too_slow]
+    phases=[Phase.explicit, Phase.generate, Phase.shrink],
+    derandomize=True,
+    suppress_health_check=[HealthCheck.function_scoped_fixture, HealthCheck.too_slow],
 )
 
 
@@ -66,7 +68,14 @@ def test_postgresql(postgresql: str, rows: list[Row], q: Question) -> None:
 def test_many_rows_agree_on_all_engines(tmp_path: Path, design: str, labelled_at: bool) -> None:
     """4,000 rows at once: the same integers from DuckDB, SQLite and memory as from the plain count."""
     rows = random_rows(11, 4000, TEXT_TIMES)
-    q = question(design, labelled_at=labelled_at, slices=("depot", "carrier"), where=True, zone="Europe/Berlin", source_zone="Europe/Berlin")
+    q = question(
+        design,
+        labelled_at=labelled_at,
+        slices=("depot", "carrier"),
+        where=True,
+        zone="Europe/Berlin",
+        source_zone="Europe/Berlin",
+    )
     expected = oracle.count(rows, q)
 
     for source in (
@@ -101,7 +110,9 @@ def test_every_reason_is_guarded(monkeypatch: pytest.MonkeyPatch, reason: str) -
     assert oracle.count(rows, q)["rejected"][reason] > 0
     assert oracle.count(rows, q) == oracle.told(source.tally([q])[0])
     original = Statement._reason
-    monkeypatch.setattr(Statement, "_reason", lambda self, name, condition: [] if name == reason else original(self, name, condition))
+    monkeypatch.setattr(
+        Statement, "_reason", lambda self, name, condition: [] if name == reason else original(self, name, condition)
+    )
 
     try:
         found = oracle.told(source.tally([q])[0])

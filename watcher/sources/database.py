@@ -251,7 +251,8 @@ def _postgresql(url: sa.URL) -> sa.Engine:
 
 def shown(url: sa.URL) -> str:
     """Return a url without user, password and options: what may be printed."""
-    return url.set(username=None, password=None, query={}).render_as_string(hide_password=True)
+    bare = sa.URL.create(url.drivername, host=url.host, port=url.port, database=url.database)
+    return bare.render_as_string(hide_password=True)
 
 
 def scrubbed(message: str, url: sa.URL) -> str:

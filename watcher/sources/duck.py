@@ -139,7 +139,7 @@ def _reason(message: str) -> str:
         return "line-too-long"
     if "nvalid unicode" in message or "not utf-8" in message.lower():
         return "not-utf8"
-    return "lines-unaccounted" if "CSV Error" in message else "unreadable"
+    return "lines-unaccounted" if "CSV" in message else "unreadable"
 
 
 def _first_lines(error: Exception) -> str:

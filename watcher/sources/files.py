@@ -176,8 +176,9 @@ class FileSource:
             header = read_header(path)
             counted = physical.count(path, header.delimiter, self._spec.max_bytes)
             file = _File(path, path, header, counted, held=False)
-            if counted.unfinished and self._clock() - path.stat().st_mtime < SETTLED:
-                file = _held_back(file, scratch / f"{number}.csv")
+            held = bool(counted.unfinished) and self._clock() - path.stat().st_mtime < SETTLED
+            if held or counted.mixed:
+                file = _copied(file, scratch / f"{number}.csv", held=held)
             files.append(file)
         rows, size = sum(file.records for file in files), sum(file.lines.size for file in files)
         for key, found, most in (("max_rows", rows, self._spec.max_rows), ("max_bytes", size, self._spec.max_bytes)):
@@ -257,17 +258,12 @@ def _table(engine: Duck, files: Sequence[_File], wanted: Sequence[str], *, numbe
     )
 
 
-def _held_back(file: _File, copy: Path) -> _File:
-    """Return the file without its unfinished last line: a copy, since readers take whole files."""
-    left = file.lines.size - file.lines.unfinished
-    with copy.open("wb") as out:
-        for block in physical.chunks(file.path):
-            out.write(block[:left])
-            left -= min(left, len(block))
-            if not left:
-                break
-    kept = replace(file.lines, total=file.lines.total - 1, size=file.lines.size - file.lines.unfinished, unfinished=0)
-    return replace(file, read=copy.resolve(), lines=kept, held=True)
+def _copied(file: _File, copy: Path, *, held: bool) -> _File:
+    """Return the file as a copy that the engine can read: one kind of line end, without an unfinished last line if `held`."""
+    size = file.lines.size - (file.lines.unfinished if held else 0)
+    physical.copy(file.path, copy, size, mend=file.lines.mixed)
+    kept = replace(file.lines, total=file.lines.total - 1, size=size, unfinished=0) if held else file.lines
+    return replace(file, read=copy.resolve(), lines=kept, held=held)
 
 
 def _signature(paths: Sequence[Path]) -> str:

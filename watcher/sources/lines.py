@@ -41,6 +41,8 @@ class Lines:
     """Bytes after decompression."""
     unfinished: int
     """Bytes of a last line that has no newline."""
+    mixed: bool = False
+    """Some lines end in CRLF and some in LF."""
 
 
 def chunks(path: Path) -> Iterator[bytes]:
@@ -75,6 +77,20 @@ def count(path: Path, delimiter: str, most: int | None = None) -> Lines:
     return scan.result()
 
 
+def copy(path: Path, to: Path, size: int, *, mend: bool) -> None:
+    """Copy the first `size` decompressed bytes; `mend` makes every CRLF an LF."""
+    left, kept = size, b""
+    with to.open("wb") as out:
+        for block in chunks(path):
+            part = kept + block[:left]
+            left -= min(left, len(block))
+            kept = b"\r" if mend and left and part.endswith(b"\r") else b""
+            part = part[: len(part) - len(kept)]
+            out.write(part.replace(b"\r\n", b"\n") if mend else part)
+            if not left:
+                return
+
+
 def blank(path: Path, lines: Lines, delimiter: str) -> int:
     """Count the lines with nothing in them, quoted fields left aside; a second pass, made only when rows are missing."""
     scan = _Scan(path.name, ord(delimiter), lines.quoted, blanks=0)
@@ -103,6 +119,7 @@ class _Scan:
     quoted: bool
     size: int = 0
     newlines: int = 0
+    crlf: int = 0
     embedded: int = 0
     open: bool = False
     since: int = 0
@@ -116,7 +133,9 @@ class _Scan:
     def take(self, block: bytes) -> None:
         array = np.frombuffer(block, dtype=np.uint8)
         found = int(np.count_nonzero(array == _NEWLINE))
-        self._measure(block, array, found)
+        self._measure(block, found)
+        if b"\r" in block or self.tail[-1:] == b"\r":
+            self.crlf += block.count(b"\r\n") + (self.tail[-1:] == b"\r" and block[:1] == b"\n")
         if self.blanks is not None:
             self._blank(block, array)
         if self.quoted:
@@ -125,7 +144,7 @@ class _Scan:
         self.size += len(block)
         self.tail = (self.tail + block)[-4:]
 
-    def _measure(self, block: bytes, array: Any, found: int) -> None:
+    def _measure(self, block: bytes, found: int) -> None:
         if not found:
             self.since += len(block)
             longest = self.since
@@ -203,4 +222,5 @@ class _Scan:
                 f"the quote opened in line {self.opened} of {self.name} is never closed and would swallow the rest of the file",
             )
         total = self.newlines + (1 if self.since else 0)
-        return Lines(total, self.embedded, self.quoted, self.size, self.since)
+        mixed = 0 < self.crlf < self.newlines
+        return Lines(total, self.embedded, self.quoted, self.size, self.since, mixed)
