@@ -81,7 +81,8 @@ def _note(heard: Heard, kind: str, text: str) -> None:
         heard.warnings.append(text)
 
 
-@pytest.fixture(scope="session")
+# Of a module: while it runs, Playwright keeps an event loop in this thread, which other tests want for themselves.
+@pytest.fixture(scope="module")
 def chromium() -> Iterator[Chromium]:
     """A running Chromium."""
     from playwright.sync_api import sync_playwright

@@ -27,7 +27,14 @@ def refusals(logs: list[Any]) -> list[str]:
 
 def operations(document: dict[str, Any]) -> list[tuple[str, str]]:
     """(method, path with every parameter filled in) of everything in an OpenAPI document."""
-    values = {"name": "damage-photos", "version": "1", "chart": "bounds", "week": "2026-W10", "revision": "0", "file": "x"}
+    values = {
+        "name": "damage-photos",
+        "version": "1",
+        "chart": "bounds",
+        "week": "2026-W10",
+        "revision": "0",
+        "file": "x",
+    }
     return [
         (method.upper(), re.sub(r"{(\w+)}", lambda m: values[m.group(1)], path))
         for path, methods in document["paths"].items()
@@ -153,7 +160,9 @@ def test_on_loopback_a_change_needs_a_token_too(demo):
     assert demo.acknowledged.seen == []
 
 
-@pytest.mark.parametrize("host", ["evil.example", "localhost.evil.example", "localhost:8751", "127.0.0.1:1", "", "169.254.169.254"])
+@pytest.mark.parametrize(
+    "host", ["evil.example", "localhost.evil.example", "localhost:8751", "127.0.0.1:1", "", "169.254.169.254"]
+)
 def test_a_foreign_host_is_refused(demo, host):
     """A name that is not served here gets no page, whatever it points at: a page of another site cannot rebind its name."""
     for path in ("/", "/api/v1/promises", "/metrics", "/static/board.css", "/healthz"):
@@ -183,7 +192,10 @@ def test_hosts_of_the_configuration_are_served(demo_file):
     }  # fmt: skip
 
 
-@pytest.mark.parametrize("origin", [FOREIGN, "null", "http://localhost:81", "https://localhost.evil.example", "file://", "http://localhost/x"])
+@pytest.mark.parametrize(
+    "origin",
+    [FOREIGN, "null", "http://localhost:81", "https://localhost.evil.example", "file://", "http://localhost/x"],
+)
 def test_a_foreign_origin_is_refused(demo, origin):
     """A request from a page of another site is refused, with the right token too, reading and writing."""
     client = demo.client(demo.act)
@@ -201,7 +213,10 @@ def test_a_form_without_an_origin_is_refused(demo):
     """A cookie alone changes nothing: the request must name this site as its origin, and a cross-site mark refuses it."""
     client = demo.client()
     client.form("/sign-in", {"token": demo.act, "next": "/"})
-    for headers, reason in (({}, "no-origin"), ({"Origin": "http://localhost", "Sec-Fetch-Site": "cross-site"}, "foreign-origin")):
+    for headers, reason in (
+        ({}, "no-origin"),
+        ({"Origin": "http://localhost", "Sec-Fetch-Site": "cross-site"}, "foreign-origin"),
+    ):
         with capture_logs() as logs:
             answer = client.post(FORM, data={"breach": "1", "why": "no"}, headers=headers)
 
@@ -229,7 +244,8 @@ def test_a_thousand_wrong_tokens_are_refused_and_soon_unread(guarded, monkeypatc
     monkeypatch.setattr(type(guarded.ledger.tokens), "verify", lambda self, token: asked.append(token) or verify(token))
     with capture_logs() as logs:
         answers = [
-            client.get("/api/v1/promises", headers={"Authorization": f"Bearer {WRONG}{i}"}).status_code for i in range(1000)
+            client.get("/api/v1/promises", headers={"Authorization": f"Bearer {WRONG}{i}"}).status_code
+            for i in range(1000)
         ]
 
     assert answers == [401] * FAILURES + [429] * (1000 - FAILURES)
@@ -283,7 +299,7 @@ def test_no_path_leads_out_of_static_and_report_files(demo, path):
 
 def test_a_report_file_runs_nothing(demo):
     """An archived page is served as it was stored, in a sandbox without scripts; everything else is a download."""
-    files = [("week.html", b"<script>1</script>"), ("a\";\tX=é.csv", b"a,b"), ("x.svg", b"<svg/>")]
+    files = [("week.html", b"<script>1</script>"), ('a";\tX=é.csv', b"a,b"), ("x.svg", b"<svg/>")]
     demo.ledger.reports.add("2026-W10", files, head=demo.ledger.head(), created=demo.clock(), final=True)
     client = demo.client()
     page = client.get("/reports/2026-W10/0/week.html")
@@ -301,7 +317,9 @@ def test_a_body_that_is_too_long_is_refused(demo):
     """A long body is refused by its announced length, and cut off when its length was not announced."""
     client = demo.client(demo.act)
     with capture_logs() as logs:
-        answer = client.post("/api/v1/acknowledgements", content=b" " * 70_000, headers={"Content-Type": "application/json"})
+        answer = client.post(
+            "/api/v1/acknowledgements", content=b" " * 70_000, headers={"Content-Type": "application/json"}
+        )
 
     assert answer.status_code == 413
     assert refusals(logs) == ["too-large"]

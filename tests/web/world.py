@@ -28,7 +28,9 @@ from watcher.records import CellCounts, Counts, Entry, Event, Head, Question, Re
 from watcher.sources.base import Survey
 from watcher.web.app import Site, create_app
 
-HOSTILE = "</script><img src=x onerror=alert(1)>\x1b[31m\u202e\x00=cmd|'/C calc'!A0 \"><svg/onload=alert(2)>" + "A" * 300
+HOSTILE = (
+    "</script><img src=x onerror=alert(1)>\x1b[31m\u202e\x00=cmd|'/C calc'!A0 \"><svg/onload=alert(2)>" + "A" * 300
+)
 """A depot name that breaks out of HTML, scripts, terminals, spreadsheets and lines, if anything lets it."""
 HOSTILE_PROMISE = "../<b>\"'&?#%41\\x/y"
 FOREIGN = "http://evil.example"
@@ -86,7 +88,9 @@ def demo_promise() -> Watched:
     return watched(config, config.source[0].name)[0]
 
 
-def replay(ledger: Ledger, source: Days, promises: Sequence[Watched], *, every: int = 14, until: int = DAYS + 12) -> None:
+def replay(
+    ledger: Ledger, source: Days, promises: Sequence[Watched], *, every: int = 14, until: int = DAYS + 12
+) -> None:
     """Look every so many days."""
     with ledger.writer():
         for day in range(every, until + 1, every):
@@ -103,9 +107,7 @@ def demo_ledger(path: Path) -> None:
 def hostile_ledger(path: Path) -> None:
     """The same rows under names that attack: promise, version, source, slice column and value, reject rows."""
     cells = dict(count(generate(7)))
-    named = {
-        key: days for key, days in cells.items() if key[0] != "carrier" and key != ("depot", "Cedar")
-    }
+    named = {key: days for key, days in cells.items() if key[0] != "carrier" and key != ("depot", "Cedar")}
     named["depot", HOSTILE] = cells["depot", "Cedar"]
     base = demo_promise()
     terms = replace(

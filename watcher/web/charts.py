@@ -18,7 +18,7 @@ from watcher.text import safe
 _KEPT: Final = 256
 _ID: Final = re.compile(r'\bid="([^"]+)"')
 _USE: Final = re.compile(r'(url\(#|href="#)([^")]+)')
-_SIZE: Final = re.compile(r'^(<svg[^>]*?) width="([\d.]+)" height="([\d.]+)"')
+_CLASS: Final = re.compile(r'^(<svg[^>]*?) class="[^"]*"')
 _ROLES: Final = {
     THEMES["light"].paper: "paper",
     THEMES["light"].ink: "ink",
@@ -71,6 +71,6 @@ def inline(svg: str, prefix: str) -> Markup:
     svg = _USE.sub(lambda m: m.group(1) + names.get(m.group(2), m.group(2)), svg)
     for colour, role in _ROLES.items():
         svg = svg.replace(f'"{colour}"', f'"var(--{role})"')
-    # The height follows from viewBox and width; max-width keeps small charts from being blown up.
-    svg = _SIZE.sub(r'\1 width="\2" height="\3" class="drawn"', svg.strip(), count=1)
+    # Width, height and the rest of its look are the style sheet's, by this class.
+    svg = _CLASS.sub(r"\1", svg.strip(), count=1).replace("<svg", '<svg class="drawn"', 1)
     return Markup(svg)  # noqa: S704 - numbers and safe text, drawn by our own renderer

@@ -131,9 +131,9 @@ def term_rows(terms: Terms) -> list[tuple[str, str]]:
 
 def _terms(terms: Terms) -> Iterator[tuple[str, str]]:
     columns = terms.columns
-    yield "model", terms.model
-    yield "source", terms.source
-    yield "rows", ", ".join(f"{key} = {value}" for key, value in terms.where) or "all"
+    yield "model", safe(terms.model)
+    yield "source", safe(terms.source)
+    yield "rows", ", ".join(f"{safe(key)} = {safe(value)}" for key, value in terms.where) or "all"
     yield "measure", _MEASURES[terms.measure]
     yield "tolerance", f"{rate(terms.tolerance)}"
     yield "risk", one_in(terms.risk)
@@ -145,14 +145,14 @@ def _terms(terms: Terms) -> Iterator[tuple[str, str]]:
         "counting",
         "a bucket whole, once its labels can no longer come" if terms.count == "sealed" else "labels as they arrive",
     )
-    yield "classes", ", ".join(terms.classes)
-    yield "positive", terms.positive or ""
+    yield "classes", ", ".join(map(safe, terms.classes))
+    yield "positive", safe(terms.positive or "")
     for each in terms.slices:
         equal = len(set(each.weights)) == 1
-        pairs = zip(each.values, each.weights, strict=True)
-        yield f"slices by {each.column}", ", ".join(v if equal else f"{v} (weight {w})" for v, w in pairs)
+        pairs = zip(map(safe, each.values), each.weights, strict=True)
+        yield f"slices by {safe(each.column, 40)}", ", ".join(v if equal else f"{v} (weight {w})" for v, w in pairs)
     mapped = ((key, getattr(columns, key)) for key in columns.__slots__)
-    yield "columns", ", ".join(f"{key} = {value}" for key, value in mapped if value is not None)
+    yield "columns", ", ".join(f"{key} = {safe(value)}" for key, value in mapped if value is not None)
     yield "times", terms.time_format + (f", {terms.source_time_zone}" if terms.source_time_zone else "")
     yield "weight levels", ", ".join(terms.weight_levels)
     yield "cluster", f"at most {terms.n_max} labels" if terms.n_max is not None else ""

@@ -5,9 +5,9 @@ Rates are fractions, evidence is in nats, times are RFC 3339 in UTC. A number th
 
 from __future__ import annotations
 
-from typing import Any
+from typing import Annotated, Any
 
-from pydantic import BaseModel, Field
+from pydantic import BaseModel, BeforeValidator, Field
 
 from watcher.records import State
 
@@ -227,6 +227,11 @@ class Sources(BaseModel):
     sources: list[Source]
 
 
+def _whole(value: Any) -> Any:
+    # JSON has one kind of number: 1.0 is the integer 1, and "1" is none.
+    return int(value) if isinstance(value, float) and value.is_integer() else value
+
+
 class Acknowledge(BaseModel):
     """An acknowledgement: who is taken from the token."""
 
@@ -234,7 +239,7 @@ class Acknowledge(BaseModel):
 
     promise: str = Field(min_length=1, max_length=80)
     version: str = Field(min_length=1, max_length=80)
-    breach: int = Field(ge=1, lt=10**9, strict=True)
+    breach: Annotated[int, Field(ge=1, lt=10**9, strict=True), BeforeValidator(_whole)]
     why: str = Field(min_length=1, max_length=500, pattern=r"\S")
 
 
