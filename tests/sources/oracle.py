@@ -45,7 +45,7 @@ def instant(value: str | None, zone: str | None) -> int | None:
         return None
     *parts, offset = match.groups()
     try:
-        wall = datetime(*map(int, parts))
+        wall = datetime(*map(int, parts))  # noqa: DTZ001 - a wall clock reading has no zone
     except ValueError:
         return None
     if offset is None:
@@ -131,9 +131,9 @@ def items(rows: Sequence[Row], q: Question) -> list[Item]:
         if late or (c.selected and norm(row[c.selected]) not in ("1", "true")):
             outcome = None
         ident = norm(row[c.id]) if c.id else None
-        if any(norm(row[name]) != norm(value) for name, value in q.where):
-            kind = "outside"
-        elif at is not None and (at < read_from or (q.at_given and at >= q.now)):
+        if any(norm(row[name]) != norm(value) for name, value in q.where) or (
+            at is not None and (at < read_from or (q.at_given and at >= q.now))
+        ):
             kind = "outside"
         elif c.id and ident is None:
             kind = "no-id"
@@ -190,20 +190,22 @@ def judge(found: list[Item], q: Question) -> None:
         weight = number(item.row[c.weight]) if c.weight else None
         chance = number(item.row[c.labelling_probability]) if c.labelling_probability else None
         chosen = norm(item.row[c.selected]) if c.selected else None
-        if c.error and labelled and item.outcome not in ("0", "1", "true", "false"):
-            item.kind = "unknown-label"
-        elif c.label and (
-            item.prediction is None or (classes and not {item.prediction, item.outcome or item.prediction} <= classes)
+        if (c.error and labelled and item.outcome not in ("0", "1", "true", "false")) or (
+            c.label
+            and (
+                item.prediction is None
+                or (classes and not {item.prediction, item.outcome or item.prediction} <= classes)
+            )
         ):
             item.kind = "unknown-label"
-        elif c.weight and labelled and weight not in [float(level) for level in q.weight_levels]:
-            item.kind = "bad-weight"
-        elif c.selected and chosen not in ("0", "1", "true", "false"):
-            item.kind = "bad-weight"
         elif (
-            c.selected
-            and chosen in ("1", "true")
-            and chance not in [float(level) for level in q.labelling_probabilities]
+            (c.weight and labelled and weight not in [float(level) for level in q.weight_levels])
+            or (c.selected and chosen not in ("0", "1", "true", "false"))
+            or (
+                c.selected
+                and chosen in ("1", "true")
+                and chance not in [float(level) for level in q.labelling_probabilities]
+            )
         ):
             item.kind = "bad-weight"
         elif c.cluster and norm(item.row[c.cluster]) is None:

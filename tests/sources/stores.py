@@ -8,8 +8,8 @@ from collections.abc import Sequence
 from pathlib import Path
 
 import psycopg
-
 from sources.rows import COLUMNS, Row
+
 from watcher.sources import Source, SourceSpec, open_source
 
 

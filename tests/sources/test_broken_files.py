@@ -61,7 +61,7 @@ def test_a_stray_quote_where_nothing_is_quoted_is_text(tmp_path: Path) -> None:
     put(tmp_path, HEADER + many(0, 500) + 'p500,2026-06-01T12:00:00Z,ok,ok,12" pipe\n' + many(501, 1000))
     found = tally(tmp_path)
 
-    assert (1000, {}, 1000, 0) == (predictions(found), found.rejected, found.lines, found.blank)
+    assert (predictions(found), found.rejected, found.lines, found.blank) == (1000, {}, 1000, 0)
     assert any(cell.value == '12" pipe' for cell in found.cells)
 
 
@@ -99,7 +99,7 @@ def test_newlines_inside_quoted_fields_are_accounted_for(tmp_path: Path) -> None
     )
     found = tally(tmp_path)
 
-    assert (2, 4, 2) == (predictions(found), found.lines, found.blank)
+    assert (predictions(found), found.lines, found.blank) == (2, 4, 2)
     assert {"", 'A\n\n"x", y\nB'} == {cell.value for cell in found.cells if cell.column}
 
 
@@ -121,7 +121,7 @@ def test_half_a_last_line_is_held_back_while_the_file_is_young(tmp_path: Path) -
     os.utime(path, (NOW - 59, NOW - 59))
     found = tally(tmp_path)
 
-    assert (10, 10, {}, True) == (predictions(found), found.lines, found.rejected, found.has_future)
+    assert (predictions(found), found.lines, found.rejected, found.has_future) == (10, 10, {}, True)
 
 
 def test_half_a_last_line_that_stays_is_no_row(tmp_path: Path) -> None:
@@ -139,7 +139,7 @@ def test_a_complete_last_line_without_newline_counts_after_a_minute(tmp_path: Pa
     late = tally(tmp_path)
     early = tally(tmp_path, clock=NOW - 10)
 
-    assert (10, False, 9, True) == (predictions(late), late.has_future, predictions(early), early.has_future)
+    assert (predictions(late), late.has_future, predictions(early), early.has_future) == (10, False, 9, True)
 
 
 def test_a_byte_order_mark_is_no_part_of_the_first_column(tmp_path: Path) -> None:
@@ -147,7 +147,7 @@ def test_a_byte_order_mark_is_no_part_of_the_first_column(tmp_path: Path) -> Non
     put(tmp_path, b"\xef\xbb\xbf" + (HEADER + many(0, 3)).encode())
     put(tmp_path, b'\xef\xbb\xbf"parcel"' + (HEADER + many(0, 3)).encode().removeprefix(b"parcel"), "quoted.csv")
 
-    assert (3, 3) == (predictions(tally(tmp_path)), predictions(tally(tmp_path, "quoted.csv")))
+    assert (predictions(tally(tmp_path)), predictions(tally(tmp_path, "quoted.csv"))) == (3, 3)
 
 
 def test_gz_is_decompressed_and_a_truncated_one_fails(tmp_path: Path) -> None:
@@ -173,7 +173,7 @@ def test_no_bytes_no_header_no_file_are_no_zero(tmp_path: Path) -> None:
     assert refused(tmp_path, "nowhere.csv").reason == "missing"
     assert refused(tmp_path, "*.parquet").reason == "missing"
     header = tally(tmp_path, "header.csv")
-    assert (0, 0, ()) == (predictions(header), header.lines, header.cells)
+    assert (predictions(header), header.lines, header.cells) == (0, 0, ())
 
 
 def test_a_file_replaced_once_during_the_pull_is_read_again(tmp_path: Path) -> None:
@@ -215,7 +215,7 @@ def test_columns_may_stand_in_another_order_in_each_file(tmp_path: Path) -> None
     found = tally(tmp_path, "*.csv")
     whole = next(cell for cell in found.cells if not cell.column)
 
-    assert (11, 1, 11) == (whole.counts.predictions, whole.counts.errors, found.lines)
+    assert (whole.counts.predictions, whole.counts.errors, found.lines) == (11, 1, 11)
 
 
 def test_a_missing_column_is_named_with_the_nearest(tmp_path: Path) -> None:
@@ -325,7 +325,7 @@ def test_hostile_text_is_only_text(tmp_path: Path) -> None:
     source = open_source(SourceSpec("desk", "csv", path="rows.csv", base=tmp_path))
     one, found = source.tally([q, everything])
 
-    assert (1, 10) == (predictions(one), one.outside)
+    assert (predictions(one), one.outside) == (1, 10)
     assert set(HOSTILE) == {cell.value for cell in found.cells if cell.column}
 
 
@@ -346,9 +346,9 @@ def test_rejected_rows_are_shown_with_file_and_line(tmp_path: Path) -> None:
         asked(), "bad-time"
     )
 
-    assert ("rows.csv", 5, "p3", "2026-02-30T00:00:00Z") == (bad.file, bad.line, bad.id, bad.values["at"])
-    assert (11, None, " Birch") == (nameless.line, nameless.id, nameless.values["depot"])
-    assert (None, {}) == (secret.id, secret.values)
+    assert (bad.file, bad.line, bad.id, bad.values["at"]) == ("rows.csv", 5, "p3", "2026-02-30T00:00:00Z")
+    assert (nameless.line, nameless.id, nameless.values["depot"]) == (11, None, " Birch")
+    assert (secret.id, secret.values) == (None, {})
     assert len(source.rejected(asked(now=0), "future-time", limit=2)) == 2
 
 
@@ -373,10 +373,10 @@ def test_a_survey_names_columns_values_and_the_first_day(tmp_path: Path) -> None
 
     assert HEADER.strip().split(",") == list(draft.columns) == source.columns()
     assert ("p0", "2026-06-01T12:00:00Z", "ok", "ok", "Alder") in draft.rows
-    assert ((("ok", 3), ("1", 1)), (("1", 2), ("ok", 1)), 3, 1) == (
+    assert (
         values.predictions,
         values.labels,
         values.pairs,
         values.differing,
-    )
-    assert (1735689600, (("depot", 2),), False) == (values.first_time, values.slices, values.disjoint)
+    ) == ((("ok", 3), ("1", 1)), (("1", 2), ("ok", 1)), 3, 1)
+    assert (values.first_time, values.slices, values.disjoint) == (1735689600, (("depot", 2),), False)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from datetime import datetime, timedelta
 from zoneinfo import ZoneInfo
 
@@ -46,7 +47,7 @@ def test_a_bucket_starts_where_the_floored_wall_clock_changes(zone: str, width: 
 def test_starts_ends_and_places_agree(zone: str, width: int) -> None:
     """Each bucket ends where the next starts, and holds its own first and last second."""
     starts = bucket_starts(FROM, FROM + 300 * 86_400, width, zone)
-    for start, end in list(zip(starts, starts[1:], strict=False))[:: max(1, len(starts) // 400)]:
+    for start, end in list(itertools.pairwise(starts))[:: max(1, len(starts) // 400)]:
         assert end == bucket_end(start, width, zone) == bucket_end(end - 1, width, zone)
         assert start == bucket_of(start, FROM, width, zone) == bucket_of(end - 1, FROM, width, zone)
         assert local_start(start, width, zone) == local_start(end - 1, width, zone) < local_start(end, width, zone)
@@ -56,12 +57,12 @@ def test_days_of_23_and_25_hours() -> None:
     """On the two days the clocks change a day is 23 and 25 hours long."""
     starts = bucket_starts(epoch("2026-03-01T00:00+01:00"), epoch("2026-12-01T00:00Z"), 86_400, "Europe/Berlin")
     lengths = {
-        b - a: datetime.fromtimestamp(a, ZoneInfo("Europe/Berlin")).date()
-        for a, b in zip(starts, starts[1:], strict=False)
+        b - a: datetime.fromtimestamp(a, ZoneInfo("Europe/Berlin")).date() for a, b in itertools.pairwise(starts)
     }
 
-    assert {82_800: "2026-03-29", 90_000: "2026-10-25"} == {
-        length: str(day) for length, day in lengths.items() if length != 86_400
+    assert {length: str(day) for length, day in lengths.items() if length != 86_400} == {
+        82_800: "2026-03-29",
+        90_000: "2026-10-25",
     }
 
 
@@ -69,7 +70,7 @@ def test_a_clock_set_back_across_midnight_revisits_no_day() -> None:
     """St John's turned its clock from 00:01 to 23:01 of the day before until 2011: days stay spans without holes."""
     starts = bucket_starts(epoch("2010-10-01T12:00Z"), epoch("2010-12-01T00:00Z"), 86_400, "America/St_Johns")
 
-    assert {86_400, 90_000} == {b - a for a, b in zip(starts[1:], starts[2:], strict=False)}
+    assert {86_400, 90_000} == {b - a for a, b in itertools.pairwise(starts)}
     assert starts == sorted(set(starts))
 
 
@@ -77,7 +78,7 @@ def test_skipped_and_repeated_hours_of_a_wall_clock() -> None:
     """A skipped hour has no offset, a repeated one has the first."""
     pieces = wall_offsets(epoch("2026-01-01T00:00Z"), epoch("2026-12-31T00:00Z"), "Europe/Berlin")
 
-    assert [3600, None, 7200, 3600] == [offset for _, offset in pieces]
+    assert [offset for _, offset in pieces] == [3600, None, 7200, 3600]
     assert [epoch("2026-03-29T02:00Z"), epoch("2026-03-29T03:00Z"), epoch("2026-10-25T03:00Z")] == [
         wall for wall, _ in pieces[1:]
     ]

@@ -6,9 +6,9 @@ from pathlib import Path
 
 import pytest
 from hypothesis import HealthCheck, Phase, given, settings
-from sqlalchemy.exc import SQLAlchemyError
 from sources import oracle, stores
 from sources.rows import COLUMNS, DESIGNS, TEXT_TIMES, TIMES, Row, question, questions, random_rows, some_rows
+from sqlalchemy.exc import SQLAlchemyError
 
 from watcher.records import REASONS, Question
 from watcher.sources.memory import MemorySource

@@ -67,5 +67,5 @@ def test_blank_lines_and_mended_ends(tmp_path: Path, monkeypatch: pytest.MonkeyP
     found = lines.count(path, ",")
     lines.copy(path, copy, found.size, mend=True)
 
-    assert (6, 11, 2, True) == (lines.blank(path, found, ","), found.total, found.embedded, found.mixed)
+    assert (lines.blank(path, found, ","), found.total, found.embedded, found.mixed) == (6, 11, 2, True)
     assert copy.read_bytes() == b'\na,b\n\n\n"x\n\n",y\n\n\nc,d\n\n'

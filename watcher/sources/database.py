@@ -91,10 +91,8 @@ class DatabaseSource:
         """Return at most `limit` of the rows that were rejected for `reason`."""
         place = self._spec.table or "query"
         with self._session() as session:
-            rows = []
-            for row in session.run(session.statement(question).rejected_rows(reason, limit)):
-                rows.append(rejected_row(question, reason, place, None, row, keep=self._spec.keep_raw))
-            return rows
+            rows = session.run(session.statement(question).rejected_rows(reason, limit))
+            return [rejected_row(question, reason, place, None, row, keep=self._spec.keep_raw) for row in rows]
 
     def survey(self, question: Question | None = None) -> Survey:
         """Look at the columns and first rows (no question), or at the values that a question would read."""
@@ -142,7 +140,7 @@ class _Session:
 
     def _described(self) -> dict[str, Held]:
         result = self._execute(sa.select(sa.text("*")).select_from(self.rows).limit(0))
-        description = result.cursor.description if result.cursor is not None else ()
+        description: Sequence[Any] = result.cursor.description or ()
         names = list(result.keys())
         if self._connection.dialect.name == "sqlite":
             return dict.fromkeys(names, "text")
@@ -180,13 +178,13 @@ class _Session:
         for name in wanted:
             if name not in self.holds:
                 raise self._failed("column-missing", missing(name, list(self.holds), place))
-        for name in (question.columns.time, question.columns.labelled_at):
-            if name is not None:
-                self._check_time(question, name)
+        for column in (question.columns.time, question.columns.labelled_at):
+            if column is not None:
+                self._check_time(question, column)
         columns = {name: sa.column(name, _TYPES.get(self.holds[name])) for name in wanted}
         rows = self.rows
         if isinstance(rows, sa.TableClause):
-            rows = sa.table(rows.name, *columns.values(), schema=rows.schema)
+            rows = sa.table(str(rows.name), *columns.values(), schema=rows.schema)
             columns = {name: rows.c[name] for name in wanted}
         return Statement(question, Table(rows, columns, {name: self.holds[name] for name in wanted}))
 

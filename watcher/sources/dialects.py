@@ -24,7 +24,7 @@ class DuckDBText(PGDialect):
     supports_statement_cache = True
 
     def __init__(self) -> None:
-        super().__init__(paramstyle="numeric_dollar")
+        super().__init__(paramstyle="numeric_dollar")  # type: ignore[no-untyped-call]
 
 
 class Trimmed(FunctionElement[str]):

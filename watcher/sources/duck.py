@@ -106,6 +106,7 @@ class Duck:
         with self._told():
             self._connection.execute(f"CREATE OR REPLACE TEMP TABLE {name} AS {sql}", values)
             found = self._connection.execute(f"SELECT count(*) FROM {name}").fetchone()  # noqa: S608 - our own name
+        assert found is not None
         return int(found[0])
 
 

@@ -83,7 +83,7 @@ class FileSource:
             self._pulled()
             return found
 
-        return self._steady(questions, pull)
+        return self._steady(pull)
 
     def rejected(self, question: Question, reason: str, limit: int = 20) -> list[RejectedRow]:
         """Return at most `limit` of the rows that were rejected for `reason`, by file and line."""
@@ -93,7 +93,7 @@ class FileSource:
             rows = engine.run(statement.rejected_rows(reason, limit))
             return [self._rejected(question, reason, row, files) for row in rows]
 
-        return self._steady([question], pull)
+        return self._steady(pull)
 
     def survey(self, question: Question | None = None) -> Survey:
         """Look at the columns and first rows (no question), or at the values that a question would read."""
@@ -108,18 +108,18 @@ class FileSource:
             rows = engine.run(sa.select(*[table.columns[name] for name in names]).limit(SAMPLE))
             return Survey(names, tuple(tuple(row) for row in rows))
 
-        return self._steady([question] if question else [], pull)
+        return self._steady(pull)
 
     # --- one consistent read ------------------------------------------------------------------------------------------
 
-    def _steady(self, questions: Sequence[Question], pull: Callable[[Sequence[_File], Duck], _T]) -> _T:
+    def _steady(self, pull: Callable[[Sequence[_File], Duck], _T]) -> _T:
         """Return what `pull` found while the files stayed the same; the second change in a row puts the look off."""
         for _ in range(2):
             before = self.signature()
             failure: SourceFailed | None = None
             found: list[_T] = []
             try:
-                found.append(self._once(questions, pull))
+                found.append(self._once(pull))
             except SourceFailed as error:
                 failure = error
             try:
@@ -136,7 +136,7 @@ class FileSource:
             "a file changed while it was read, twice in a row; write to a file beside it and rename it when it is complete",
         )
 
-    def _once(self, questions: Sequence[Question], pull: Callable[[Sequence[_File], Duck], _T]) -> _T:
+    def _once(self, pull: Callable[[Sequence[_File], Duck], _T]) -> _T:
         paths = self._paths()
         began = time.monotonic()
         with self._told(), tempfile.TemporaryDirectory(prefix="watcher-") as scratch_name:
@@ -160,7 +160,7 @@ class FileSource:
         if not pattern:
             raise SourceFailed(self.name, "missing", "no path is given; name a file or a glob such as 'labels/*.csv'")
         whole = self._spec.base / pattern
-        found = [whole] if whole.is_file() else [Path(path) for path in sorted(glob.glob(str(whole), recursive=True))]
+        found = [whole] if whole.is_file() else [Path(path) for path in sorted(glob.glob(str(whole), recursive=True))]  # noqa: PTH207 - base and pattern may both be absolute
         files = [path.resolve() for path in found if path.is_file()]
         if not files:
             raise SourceFailed(
@@ -248,7 +248,9 @@ def _table(engine: Duck, files: Sequence[_File], wanted: Sequence[str], *, numbe
         engine.execute("SET preserve_insertion_order = true")
     engine.execute(f"CREATE OR REPLACE TEMP VIEW samples AS {' UNION ALL '.join(parts)}")
     columns = [sa.column(f"n{i}", sa.Text()) for i in range(len(wanted))]
-    extra_columns = [sa.column("file", sa.Text()), sa.column("line", sa.BigInteger())] if numbered else []
+    extra_columns: list[sa.ColumnClause[Any]] = (
+        [sa.column("file", sa.Text()), sa.column("line", sa.BigInteger())] if numbered else []
+    )
     rows = sa.table("samples", *columns, *extra_columns)
     return Table(
         rows,

@@ -30,7 +30,7 @@ def read_header(path: Path) -> Header:
     """Read the header of a CSV file; `Malformed` when there is none or it is no text."""
     opener = gzip.open if path.suffix == ".gz" else open
     try:
-        with opener(path, "rb") as raw, io.TextIOWrapper(raw, encoding="utf-8-sig", newline="") as file:  # type: ignore[arg-type, operator]
+        with opener(path, "rb") as raw, io.TextIOWrapper(raw, encoding="utf-8-sig", newline="") as file:
             first = file.readline(_FIELD)
             if not first.strip():
                 raise Malformed("empty-file", f"{path.name} has no header line; the first line must name the columns")

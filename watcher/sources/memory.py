@@ -5,6 +5,7 @@ from __future__ import annotations
 import sqlite3
 from collections.abc import Iterable, Iterator, Mapping, Sequence
 from datetime import datetime
+from typing import Any
 
 import sqlalchemy as sa
 from sqlalchemy.pool import StaticPool
@@ -72,7 +73,8 @@ class MemorySource:
         names = tuple(self._columns)
         if question is not None:
             return survey_of(self._statement(question), self._run, names)
-        return Survey(names, tuple(tuple(row) for row in self._run(sa.select(self._table).limit(SAMPLE))))
+        rows = self._run(sa.select(self._table).limit(SAMPLE))
+        return Survey(names, tuple(tuple(row) for row in rows))
 
     def _statement(self, question: Question) -> Statement:
         wanted = parts_of(question)
@@ -82,7 +84,7 @@ class MemorySource:
         columns = {name: self._table.c[f"n{self._columns.index(name)}"] for name in wanted}
         return Statement(question, Table(self._table, columns, dict.fromkeys(wanted, "text")))
 
-    def _run(self, select: sa.Select[tuple[object, ...]]) -> Iterator[sa.Row[tuple[object, ...]]]:
+    def _run(self, select: sa.Select[Any]) -> Iterator[Any]:
         with self._engine.connect() as connection:
             yield from connection.execute(select)
 

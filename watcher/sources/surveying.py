@@ -30,7 +30,8 @@ def survey_of(statement: Statement, run: Run, columns: tuple[str, ...]) -> Surve
         return tuple((value, count) for value, count in run(select.order_by(number.desc(), column).limit(_VALUES)))
 
     label = "error" if q.columns.error else "label"
-    pairs, differing = sa.literal(0), sa.literal(0)
+    pairs: sa.ColumnElement[Any] = sa.literal(0)
+    differing: sa.ColumnElement[Any] = sa.literal(0)
     if q.columns.label and q.columns.prediction:
         both = sa.and_(rows.c.label.is_not(None), rows.c.prediction.is_not(None))
         pairs = _number(both)
