@@ -136,6 +136,20 @@ def test_only_the_promises_asked_for(found: Snapshot) -> None:
         assert len(snapshot(ledger, promises=[TERMS.promise]).promises) == len(found.promises)
 
 
+def test_the_manual_works_as_written(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """The Python of docs/report.md, with a week of this ledger, writes the four files."""
+    manual = (Path(__file__).parents[2] / "docs" / "report.md").read_text(encoding="utf-8")
+    code = manual.partition("```python\n")[2].partition("```")[0]
+    assert "2026-W26" in code
+    monkeypatch.chdir(tmp_path)
+    fill(Ledger.open("sqlite:///watcher.db", new_id="invented")).close()
+
+    exec(code.replace("2026-W26", "2026-W48"), {})
+    assert {path.name for path in (tmp_path / "reports").iterdir()} == {
+        f"2026-W48.{each}" for each in ("html", "csv", "json", "pdf")
+    }
+
+
 class _Moving:
     """A ledger whose head moves on while it is read for the first time."""
 
