@@ -124,7 +124,7 @@ def test_durations_go_there_and_back(text: str, span: int) -> None:
 @pytest.mark.parametrize("text", ["", "10", "d", "-1d", "1.5d", "1y", None, True])
 def test_what_is_no_duration_is_refused(text: object) -> None:
     """With an example of what is meant."""
-    with pytest.raises(ValueError, match="10d|no unit"):
+    with pytest.raises(ValueError, match=r"10d|no unit"):
         seconds(text)
 
 

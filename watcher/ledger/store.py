@@ -262,7 +262,7 @@ class Ledger:
 
     def reject_counts(self) -> dict[str, dict[str, int]]:
         """Promise -> reason -> rows the newest look saw, of all promises."""
-        with self._reading() as connection:
+        with self.reading() as connection:
             return rejects.counts(connection)
 
     # --- the outbox
@@ -303,7 +303,7 @@ class Ledger:
 
     def record_answers(self, notices: Iterable[Notice]) -> None:
         """Write down what came of a message, for all its notices at once. Raises UsageError for an unknown notice."""
-        with self._writing() as connection:
+        with self.writing() as connection:
             for one in notices:
                 outbox.record(
                     connection,
