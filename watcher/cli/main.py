@@ -29,6 +29,7 @@ class _Group(click.Group):
         "audit": "watcher.cli.audit:audit",
         "acknowledge": "watcher.cli.acknowledge:acknowledge",
         "notices": "watcher.cli.notices:notices",
+        "report": "watcher.cli.report:report",
         "export": "watcher.cli.export:export",
         "backup": "watcher.cli.backup:backup",
         "upgrade": "watcher.cli.upgrade:upgrade",

@@ -21,6 +21,7 @@ from watcher.daemon import parts as building
 from watcher.daemon.children import Cancelled, Children, Renderer
 from watcher.daemon.looking import Looker
 from watcher.daemon.posting import Poster
+from watcher.daemon.reporting import Reporting
 from watcher.daemon.serving import Server, web_app
 from watcher.errors import LedgerBusy, SchemaMismatch, SettingsError, UsageError, WatcherError
 from watcher.ledger.store import Ledger
@@ -74,6 +75,7 @@ class Service:
         self._parts = self._build(self._read())
         self._looker = Looker(self._hooks, self._log)
         self._poster = Poster(self._hooks, self._log, self._stop.is_set)
+        self._reporting = Reporting(self._hooks, self._log, self._children, lambda: self.ready()[0])
         self._scheduler: AsyncIOScheduler | None = None
         self._why_waiting = "the ledger was not opened yet"
         self._busy: set[asyncio.Task[Any]] = set()
@@ -229,6 +231,8 @@ class Service:
     async def _periodic(self) -> None:
         if self._ledger is not None:
             await asyncio.to_thread(self._poster.periodic, self._ledger, self._parts)
+        if self._ledger is not None:
+            await asyncio.to_thread(self._reporting.make_due, self._ledger, self._parts)
 
     async def _rest(self) -> None:
         await asyncio.to_thread(self._renderer.rest)
