@@ -195,6 +195,16 @@ class TestJson:
         """What a later report compares itself with survives the way through JSON unchanged."""
         assert published_from(as_json(report)) == published(report)
 
+    def test_a_revision_holds_both_figures(self) -> None:
+        """A changed figure of an earlier week stands with what was said, and as of which look."""
+        said = [replace(p, labels=p.labels - 3) for p in published(weekly(make_snapshot(), Week.parse("2026-W48")))]
+        later = replace(make_snapshot(), head=Head(99, "00" * 32), published=tuple(said[:1]))
+        revision = json.loads(as_json(weekly(later)))["promises"][0]["cells"][0]["revisions"]
+
+        assert [each["week"] for each in revision] == ["2026-W48"]
+        assert revision[0]["now"]["labels"] - revision[0]["was"]["labels"] == 3
+        assert revision[0]["was"]["look"] == 63
+
     def test_other_text_is_refused(self) -> None:
         """Text that is no report is refused in one sentence."""
         for text in ("{", "[]", '{"promises": [{}]}', "null"):

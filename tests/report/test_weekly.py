@@ -217,6 +217,20 @@ class TestWhatHappened:
             in told
         )
 
+    def test_a_quiet_week_and_a_week_of_corrections(self) -> None:
+        """No new label, labels taken away, and a flag that came down are told as such."""
+        rows = make_snapshot().promises[0].history["", ""]
+        then = replace(rows[-8].standing, flags=("stale",))
+        flagged = (*rows[:-8], replace(rows[-8], standing=then), *rows[-7:])
+
+        assert changes(flagged, replace(then, flags=())) == (
+            "No longer flagged: stale.",
+            "No label entered the evidence.",
+        )
+        assert changes(flagged, replace(then, labels=then.labels - 2)) == (
+            "Corrections took 2 labels out of the evidence.",
+        )
+
     def test_no_week_earlier(self) -> None:
         """In the first week there is nothing to compare with."""
         assert changes((), make_snapshot().promises[0].standings[0]) == (

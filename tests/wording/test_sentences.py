@@ -260,3 +260,48 @@ def test_diagnostics_in_words() -> None:
     assert text[3] == "Errors a bucket vary 0.91 times as much as independent labels of one rate would."
     assert len(text) == 4
     assert wording.diagnostic_sentences(make_standing(), make_terms()) == ()
+
+
+@pytest.mark.parametrize(
+    ("point", "careful", "words"),
+    [
+        (-0.2, -0.5, "alone lie above the tolerance"),
+        (1.4, 1.2, "Even if every unlabelled sample were an error, the average would keep the tolerance."),
+        (1.4, 0.5, "would keep the tolerance; with the upper limit in place of the estimate, from 50.0% on."),
+        (0.08, 1.2, "if more than 8.0% of the unlabelled are errors."),
+    ],
+)
+def test_tipping_points(point: float, careful: float, words: str) -> None:
+    """Below 0, above 1 and between, the tipping point means different things and is told so."""
+    found = {"tipping_point": point, "tipping_point_upper": careful}
+
+    assert words in wording.diagnostic_sentences(make_standing(diagnostics=found), make_terms())[0]
+
+
+@pytest.mark.parametrize(
+    ("changes", "words"),
+    [
+        ({}, "is neither supported nor broken"),
+        ({"breach": BREACH}, "is broken, likeliest since 20 November 2026"),
+        ({"support": Support(utc(2026, 11, 5), utc(2026, 11, 30), 0.0298)}, "is supported up to 29 November 2026"),
+        ({"labels": 0}, "nothing counted yet"),
+    ],
+)
+def test_headlines(changes: dict[str, object], words: str) -> None:
+    """A few words for a list say the state and the date that matters."""
+    assert words in wording.headline(make_standing(**changes), make_terms())
+
+
+def test_only_a_lower_limit() -> None:
+    """When nearly everything is wrong there is a lower limit and no upper one."""
+    text = wording.sentence(make_standing(life=Interval(0.4, 1.0)), make_terms())
+
+    assert "is at least 40.0% (wrong with chance at most 1 in 5,000)" in text
+
+
+def test_late_labels_are_told_and_have_a_next_step() -> None:
+    """Labels that came too late are counted in words, with what to do about them."""
+    standing = make_standing(late_labels=7)
+
+    assert "7 labels came too late to be counted." in wording.diagnostic_sentences(standing, make_terms())
+    assert "`label_lag` is too short" in " ".join(wording.next_steps(standing))
