@@ -21,7 +21,7 @@ from prometheus_client.core import (
 )
 from prometheus_client.registry import Collector
 
-from watcher.records import FLAGS, STATES, Head, SourceState, Standing, Terms
+from watcher.records import FLAGS, REASONS, STATES, Head, SourceState, Standing, Terms
 
 NAMED: Final = ("promise", "version", "slice")
 OUTCOMES: Final = ("waiting", "delivered", "dead", "cancelled")
@@ -43,19 +43,20 @@ class Snapshot:
     routes: Sequence[str]
     lease_held: bool
     head: Head
-    ledger_bytes: int
+    ledger_bytes: float
     version: str
+    readable: bool = True
+    """False: the ledger could not be read, and what comes of it is what was read last."""
+    clock_behind: float = 0.0
+    """Seconds by which the clock lies behind the newest look; above 0 no look is made."""
 
 
 class LedgerCollector(Collector):
-    """Calls for a snapshot at each scrape; while the ledger cannot be read only `watcher_ledger_up` is 0 and the rest stays
-    as it was last seen.
-    """
+    """Calls for a snapshot at each scrape."""
 
-    def __init__(self, snapshot: Callable[[], Snapshot | None], *, slices: bool) -> None:
+    def __init__(self, snapshot: Callable[[], Snapshot], *, slices: bool) -> None:
         self._snapshot = snapshot
         self._slices = slices
-        self._last: Snapshot | None = None
 
     def describe(self) -> Iterable[Metric]:
         """Nothing beforehand: the ledger need not be there when the registry is made."""
@@ -63,17 +64,33 @@ class LedgerCollector(Collector):
 
     def collect(self) -> Iterator[Metric]:
         """All families, in a fixed order."""
-        found = self._snapshot()
-        self._last = found or self._last
-        yield _gauge(
-            "watcher_ledger_up", "1 when the ledger could be read at this scrape.", (), [((), float(found is not None))]
-        )
-        if self._last is not None:
-            yield from families(self._last, slices=self._slices)
+        yield from families(self._snapshot(), slices=self._slices)
+
+
+def possible_reasons(terms: Terms) -> tuple[str, ...]:
+    """The reasons for which a row of this promise may be rejected, in the order of `REASONS`.
+
+    Each has its series from the first scrape on, so that the first reject of a kind is an increase and no new series.
+    """
+    columns = terms.columns
+    needs = {
+        "no-id": columns.id is not None,
+        "conflicting-duplicate": columns.id is not None,
+        "unknown-label": bool(terms.classes) or columns.error is not None,
+        "bad-weight": columns.weight is not None or columns.labelling_probability is not None,
+        "no-cluster": columns.cluster is not None,
+        "cluster-too-long": columns.cluster is not None,
+        "cluster-too-large": columns.cluster is not None,
+        "bad-loss": columns.loss is not None,
+    }
+    return tuple(reason for reason in REASONS if needs.get(reason, True))
 
 
 def families(snapshot: Snapshot, *, slices: bool) -> Iterator[Metric]:
     """Every family of a snapshot."""
+    yield _gauge(
+        "watcher_ledger_up", "1 when the ledger could be read at this scrape.", (), [((), float(snapshot.readable))]
+    )
     yield from _promises(snapshot, slices=slices)
     yield from _sources(snapshot)
     yield from _notices(snapshot)
@@ -82,6 +99,12 @@ def families(snapshot: Snapshot, *, slices: bool) -> Iterator[Metric]:
     )
     yield _gauge("watcher_ledger_look", "Number of the newest look.", (), [((), float(snapshot.head.look))])
     yield _gauge("watcher_ledger_bytes", "Size of the ledger.", (), [((), float(snapshot.ledger_bytes))])
+    yield _gauge(
+        "watcher_clock_behind_seconds",
+        "By how much the clock lies behind the newest look; above 0 no look is made.",
+        (),
+        [((), snapshot.clock_behind)],
+    )
     build = InfoMetricFamily("watcher_build", "The program.")
     build.add_metric((), {"version": snapshot.version})
     yield build
@@ -102,6 +125,10 @@ def _named(standing: Standing) -> tuple[str, str, str]:
     return standing.promise, standing.version, where
 
 
+def _declared(terms: Terms) -> list[tuple[str, str, str]]:
+    return [(terms.promise, terms.version, f"{s.column}={value}") for s in terms.slices for value in s.values]
+
+
 def _epoch(moment: datetime | None) -> float:
     return nan if moment is None else moment.timestamp()
 
@@ -110,6 +137,7 @@ def _promises(snapshot: Snapshot, *, slices: bool) -> Iterator[Metric]:
     every = [s for s in snapshot.standings if slices or not s.column]
     wholes = [s for s in snapshot.standings if not s.column]
     new = [(terms.promise, terms.version, "") for terms in snapshot.waiting]
+    new_cells = new + [cell for terms in snapshot.waiting if slices for cell in _declared(terms)]
     ratio = GaugeMetricFamily(
         "watcher_error_ratio",
         "Error rate: limits that hold at all times at once, and the estimate.",
@@ -139,7 +167,7 @@ def _promises(snapshot: Snapshot, *, slices: bool) -> Iterator[Metric]:
         "watcher_total_nats",
         "Evidence against the promise over all windows.",
         NAMED,
-        [(_named(s), s.total) for s in every] + [(name, nan) for name in new],
+        [(_named(s), s.total) for s in every] + [(name, nan) for name in new_cells],
     )
     yield _gauge(
         "watcher_threshold_nats",
@@ -150,7 +178,7 @@ def _promises(snapshot: Snapshot, *, slices: bool) -> Iterator[Metric]:
     state = StateSetMetricFamily("watcher_state", "Where the promise stands.", labels=NAMED)
     for standing in every:
         state.add_metric(_named(standing), {name: name == standing.state for name in STATES})
-    for name in new:
+    for name in new_cells:
         state.add_metric(name, {each: each == "undecided" for each in STATES})
     yield state
     yield _gauge(
@@ -170,7 +198,7 @@ def _promises(snapshot: Snapshot, *, slices: bool) -> Iterator[Metric]:
         "watcher_labels",
         "Labels that have entered the evidence.",
         NAMED,
-        [(_named(s), float(s.labels)) for s in every] + [(name, 0.0) for name in new],
+        [(_named(s), float(s.labels)) for s in every] + [(name, 0.0) for name in new_cells],
     )
     yield _gauge(
         "watcher_predictions",

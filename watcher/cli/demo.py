@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import hashlib
 import itertools
 import time
 from datetime import UTC, datetime
@@ -15,6 +16,7 @@ from watcher.cli import show
 from watcher.cli.common import JSON, print_json
 from watcher.demo.scenario import DAY, DAYS, RELEASED
 from watcher.demo.writing import write
+from watcher.ledger.store import Ledger
 from watcher.look import Outcome, attempt
 
 
@@ -56,7 +58,8 @@ def _once(place: Path, seed: int, *, as_json: bool) -> None:
     )
     lag = promises[0].terms.label_lag
     happened, last = [], None
-    with assembly.open_ledger(config, write=True) as ledger, ledger.writer():
+    # A drawn ledger id would enter the digests: one seed, one chain, one answer.
+    with Ledger.open(config.ledger_url(), new_id=_ledger_id(seed)) as ledger, ledger.writer():
         days = range(1, DAYS + lag // DAY + 1)
         with show.progress("days replayed", len(days)) as step:
             for day in days:
@@ -83,6 +86,10 @@ def _once(place: Path, seed: int, *, as_json: bool) -> None:
             f"Next: watcher status {path}, watcher explain {path} damage-photos --slice depot=Cedar, watcher audit {path}"
         )
     )
+
+
+def _ledger_id(seed: int) -> str:
+    return hashlib.sha256(f"watcher demo {seed}".encode()).hexdigest()[:32]
 
 
 def _json(last: Outcome) -> dict[str, object]:

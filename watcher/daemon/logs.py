@@ -35,7 +35,7 @@ def configure(stream: TextIO = sys.stderr) -> structlog.stdlib.BoundLogger:
     root = logging.getLogger()
     root.handlers = [handler]
     root.setLevel(logging.INFO)
-    for quiet in ("httpx", "httpcore", "uvicorn.access"):
+    for quiet in ("httpx", "httpcore", "uvicorn.access", "uvicorn.error"):
         logging.getLogger(quiet).setLevel(logging.WARNING)
     # A tick that finds the look before it still under way is left out: that is what max_instances is for.
     logging.getLogger("apscheduler").setLevel(logging.ERROR)

@@ -2,22 +2,37 @@
 
 from __future__ import annotations
 
+import os
+import threading
 from collections.abc import Sequence
-from typing import TYPE_CHECKING, Any, Final
+from dataclasses import dataclass
+from typing import Any, Final
 
 import structlog
 
 from watcher.daemon.children import Cancelled
+from watcher.daemon.hooks import Hooks
 from watcher.daemon.parts import Watch
-from watcher.errors import LedgerBusy, WatcherError
+from watcher.daemon.stepback import record_step_back
+from watcher.errors import LedgerBusy, SourceFailed, WatcherError
 from watcher.ledger.store import Ledger
 from watcher.look import ClockWentBack, Outcome, Routing, attempt, quiet_until
-
-if TYPE_CHECKING:
-    from watcher.daemon.service import Hooks
+from watcher.text import safe
 
 FIRST_RETRY: Final = 30.0
 LONGEST: Final = 600.0
+AT_ONCE: Final = max(2, os.cpu_count() or 2)
+"""Looks under way at a time, so that a start with many sources does not ask for the memory of them all."""
+PATIENCE: Final = 10.0
+"""Seconds for which a look waits for its turn; then it begins all the same: sources that hang must not hold up the others."""
+
+
+@dataclass(frozen=True, slots=True)
+class _Quiet:
+    """What makes a look needless: files with this signature bring nothing before `until` (epoch seconds)."""
+
+    signature: str
+    until: int
 
 
 class Looker:
@@ -26,10 +41,11 @@ class Looker:
     def __init__(self, hooks: Hooks, log: Any) -> None:
         self._hooks = hooks
         self._log = log
-        self._quiet: dict[str, tuple[str, int]] = {}
-        """source -> signature of its files at the newest look, and until when unchanged files bring nothing"""
+        self._quiet: dict[str, _Quiet] = {}
         self._failures: dict[str, int] = {}
+        self._turns = threading.BoundedSemaphore(AT_ONCE)
         self.tried: set[str] = set()
+        """Sources that were looked at, with or without success, since the daemon started."""
 
     def forget(self) -> None:
         """After a reload nothing is taken for unchanged."""
@@ -40,65 +56,99 @@ class Looker:
 
         Raises Cancelled when the daemon stops; nothing else.
         """
-        name, now = watch.source.name, int(self._hooks.clock().timestamp())
         structlog.contextvars.clear_contextvars()
-        structlog.contextvars.bind_contextvars(source=name)
+        structlog.contextvars.bind_contextvars(source=watch.source.name)
+        turn = self._turns.acquire(timeout=PATIENCE)
         try:
-            self._hooks.at_point("before-look")
-            signature = watch.source.signature() if name in self._quiet else None
-            if name in self._quiet and signature == self._quiet[name][0] and now < self._quiet[name][1]:
-                return None
-            self._quiet.pop(name, None)
-            structlog.contextvars.bind_contextvars(look=ledger.head().look)
-            signature = watch.source.signature()
-            outcome = attempt(
-                ledger,
-                watch.source,
-                watch.promises,
-                now,
-                self._hooks.timer,
-                routes=routings,
-                slice_limit=watch.table.slice_limit,
-            )
-            self._tell(outcome)
-            return self._after(ledger, watch, outcome, signature)
+            return self._look(ledger, watch, routings)
         except Cancelled:
             raise
         except ClockWentBack as error:
-            self._log.error("clock-went-back", detail=str(error))
+            self._log.error("clock-went-back", seconds=error.newest - error.now, detail=str(error))
+            record_step_back(ledger, watch.source.name, error, routings, self._log)
         except LedgerBusy as error:
             self._log.warning("the look was thrown away", detail=str(error))
-            return FIRST_RETRY
+            return min(float(watch.table.every), FIRST_RETRY)
         except WatcherError as error:
             self._log.error("the look failed; the counts stay", detail=str(error))
         except Exception:  # noqa: BLE001 - logged with its trace; the daemon must outlive it
             self._log.exception("the look failed unexpectedly; the counts stay")
         finally:
-            self.tried.add(name)
+            self.tried.add(watch.source.name)
+            if turn:
+                self._turns.release()
         return None
 
-    def _after(self, ledger: Ledger, watch: Watch, outcome: Outcome, signature: str | None) -> float | None:
+    def _look(self, ledger: Ledger, watch: Watch, routings: Sequence[Routing]) -> float | None:
         name = watch.source.name
+        self._hooks.at_point("before-look")
+        now = int(self._hooks.clock().timestamp())
+        head = ledger.head()
+        structlog.contextvars.bind_contextvars(look=head.look, head=head.digest)
+        # Before it is asked whether anything is new: a clock that went back must be told even then.
+        if now < (newest := ledger.newest_at()):
+            raise ClockWentBack(now, newest)
+        signature = _signature(watch)
+        if self._nothing_new(ledger, watch, signature, now):
+            return None
+        outcome = attempt(
+            ledger,
+            watch.source,
+            watch.promises,
+            now,
+            self._hooks.timer,
+            routes=routings,
+            slice_limit=watch.table.slice_limit,
+        )
+        self._tell(outcome)
         if outcome.failed:
-            self._failures[name] = self._failures.get(name, 0) + 1
-            usual = float(watch.table.every)
-            return min(max(usual, LONGEST), min(usual, FIRST_RETRY) * 2.0 ** min(self._failures[name] - 1, 10))
+            return self._later(watch)
         self._failures.pop(name, None)
         if signature is not None:
-            until = quiet_until(ledger, name, watch.promises, outcome.has_future)
-            if until:
-                self._quiet[name] = (signature, until)
+            self._remember(ledger, watch, signature, has_future=outcome.has_future)
         return None
 
+    def _nothing_new(self, ledger: Ledger, watch: Watch, signature: str | None, now: int) -> bool:
+        name = watch.source.name
+        if signature is None or name in self._failures:
+            return False
+        if name not in self._quiet and name not in self.tried:
+            # The first look after a start: the ledger knows which files were read to the end before it.
+            state = ledger.source_state(name)
+            if state.failing_since is None and state.signature == signature:
+                self._remember(ledger, watch, signature, has_future=False)
+        known = self._quiet.get(name)
+        if known is not None and known.signature == signature and now < known.until:
+            return True
+        self._quiet.pop(name, None)
+        return False
+
+    def _remember(self, ledger: Ledger, watch: Watch, signature: str, *, has_future: bool) -> None:
+        until = quiet_until(ledger, watch.source.name, watch.promises, has_future)
+        if until:
+            self._quiet[watch.source.name] = _Quiet(signature, until)
+
+    def _later(self, watch: Watch) -> float:
+        """Seconds until a source that failed is tried again: soon at first, then less and less often."""
+        name, usual = watch.source.name, float(watch.table.every)
+        self._failures[name] = self._failures.get(name, 0) + 1
+        return min(max(usual, LONGEST), min(usual, FIRST_RETRY) * 2.0 ** min(self._failures[name] - 1, 10))
+
     def _tell(self, outcome: Outcome) -> None:
-        structlog.contextvars.bind_contextvars(look=outcome.head.look)
+        structlog.contextvars.bind_contextvars(look=outcome.head.look, head=outcome.head.digest)
         for event in outcome.events:
-            facts = {"promise": event.promise, "version": event.version}
             where = f"{event.column}={event.value}" if event.column else ""
-            self._log.info(event.kind, **facts, slice=where, facts=dict(event.facts))
-        for failure in outcome.failed:
-            self._log.warning("source gave no answer", reason=failure.reason, detail=failure.detail)
-        if outcome.written:
             self._log.info(
-                "look recorded", head=outcome.head.digest, promises=len({s.promise for s in outcome.standings})
+                event.kind, promise=event.promise, version=event.version, slice=safe(where), facts=dict(event.facts)
             )
+        for failure in outcome.failed:
+            self._log.warning("source gave no answer", reason=failure.reason, detail=safe(failure.detail, 500))
+        if outcome.written:
+            self._log.info("look recorded", promises=len({(s.promise, s.version) for s in outcome.standings}))
+
+
+def _signature(watch: Watch) -> str | None:
+    try:
+        return watch.source.signature()
+    except SourceFailed:
+        return None  # the look will meet it, and record it

@@ -3,60 +3,65 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from typing import TYPE_CHECKING, Any
+from typing import Any
 from urllib.parse import quote
 
 import structlog
 
 from watcher.assembly import units
+from watcher.daemon.hooks import Hooks
 from watcher.daemon.parts import Parts
 from watcher.errors import WatcherError
 from watcher.ledger.keys import message_key, period_key
 from watcher.ledger.store import Ledger
 from watcher.notices.base import Message, RouteSpec
 from watcher.notices.booked import Booked
-from watcher.notices.due import OpenBreach, due_now, notice_of
+from watcher.notices.due import Due, OpenBreach, due_now, notice_of
 from watcher.notices.message import Writer
 from watcher.notices.outbox import send_due
-from watcher.records import Notice, Standing
-
-if TYPE_CHECKING:
-    from watcher.daemon.service import Hooks
+from watcher.records import Head, Notice, Standing
 
 
 class Poster:
     """Sends what waits in the outbox and adds what falls due by the calendar."""
 
-    def __init__(self, hooks: Hooks, log: Any, stopping: Callable[[], bool]) -> None:
+    def __init__(self, hooks: Hooks, log: Any, stopping: Callable[[], bool], address: Callable[[], str]) -> None:
         self._hooks = hooks
         self._log = log
         self._stopping = stopping
+        self._address = address
+        self._added: set[tuple[str, str]] = set()
+        """(route, key) of what this process has added by the calendar."""
+        self._unanswered: tuple[Head, list[OpenBreach]] | None = None
+        """The breaches that nobody has acknowledged, as of a head of the chain: reading all standings has its price."""
 
-    def send(self, ledger: Ledger, parts: Parts) -> None:
-        """One pass over the routes; never raises."""
+    def send(self, ledger: Ledger, parts: Parts, route: RouteSpec) -> None:
+        """One pass over what waits for a route; never raises."""
         structlog.contextvars.clear_contextvars()
         names = units(parts.settings)
         booked = Booked(ledger, message_key)
-        write = Writer(booked, _link(parts), lambda promise, version: names.get((promise, version), "sample"))
+        write = Writer(
+            booked, _link(parts, self._address()), lambda promise, version: names.get((promise, version), "sample")
+        )
 
-        def pointed(route: RouteSpec, message_id: str, notices: Sequence[Notice]) -> Message:
-            message = write(route, message_id, notices)
+        def pointed(to: RouteSpec, message_id: str, notices: Sequence[Notice]) -> Message:
+            message = write(to, message_id, notices)
             self._hooks.at_point("before-send")
             return message
 
         try:
             done = send_due(
                 _Pointed(booked, self._hooks.at_point),
-                parts.routes,
+                (route,),
                 parts.senders,
                 pointed,
                 clock=self._hooks.clock,
                 may_send=lambda: self._may_send(ledger),
             )
         except WatcherError as error:
-            self._log.warning("notices wait", detail=str(error))
+            self._log.warning("notices wait", route=route.name, detail=str(error))
         except Exception:  # noqa: BLE001 - logged with its trace; the daemon must outlive it
-            self._log.exception("sending failed unexpectedly; the notices wait")
+            self._log.exception("sending failed unexpectedly; the notices wait", route=route.name)
         else:
             for tried in done.attempts:
                 self._log.info("notice tried", **{name: getattr(tried, name) for name in tried.__dataclass_fields__})
@@ -72,19 +77,27 @@ class Poster:
 
     def periodic(self, ledger: Ledger, parts: Parts) -> None:
         """Add the heartbeats and reminders whose period has begun; the outbox keeps each once."""
+        structlog.contextvars.clear_contextvars()
         now = self._hooks.clock()
         try:
             head = ledger.head()
-            due = due_now(parts.routes, _unacknowledged(ledger), (), now)
-            keyed = [
-                notice_of(
-                    each, period_key(ledger.id, each.route, each.kind, each.subject, each.period_start), head.look, now
-                )
-                for each in due
-            ]
-            ledger.add_notices(keyed)
+            structlog.contextvars.bind_contextvars(look=head.look, head=head.digest)
+            if self._unanswered is None or self._unanswered[0] != head:
+                self._unanswered = (head, _unacknowledged(ledger))
+            due = due_now(parts.routes, self._unanswered[1], (), now)
+            keyed = [notice_of(each, _key(ledger, each), head.look, now) for each in due]
+            fresh = [notice for notice in keyed if (notice.route, notice.key) not in self._added]
+            if fresh:
+                ledger.add_notices(fresh)
+                self._added.update((notice.route, notice.key) for notice in fresh)
         except WatcherError as error:
             self._log.warning("heartbeats and reminders could not be added", detail=str(error))
+        except Exception:  # noqa: BLE001 - logged with its trace; the daemon must outlive it
+            self._log.exception("heartbeats and reminders failed unexpectedly")
+
+
+def _key(ledger: Ledger, due: Due) -> str:
+    return period_key(ledger.id, due.route, due.kind, due.subject, due.period_start)
 
 
 class _Pointed:
@@ -121,9 +134,8 @@ def _unacknowledged(ledger: Ledger) -> list[OpenBreach]:
     ]
 
 
-def _link(parts: Parts) -> Callable[[str, str], str]:
-    web = parts.settings.web
-    base = web.public_url or f"http://{web.listen}"
+def _link(parts: Parts, address: str) -> Callable[[str, str], str]:
+    base = (parts.settings.web.public_url or address).rstrip("/")
 
     def link(promise: str, version: str) -> str:
         if not promise:

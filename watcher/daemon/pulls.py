@@ -20,6 +20,7 @@ class ChildSource:
     """The same interface as the source itself; files are stat'ed here, rows are read over there."""
 
     def __init__(self, spec: SourceSpec, children: Children, at_point: Point) -> None:
+        open_source(spec)  # a kind or url that cannot be used is said at once, not at every look
         self._spec = spec
         self._children = children
         self._at_point = at_point

@@ -4,21 +4,29 @@ from __future__ import annotations
 
 import asyncio
 import contextlib
+import gzip
 import socket
 import threading
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from dataclasses import dataclass, field
 from importlib.metadata import version
+from math import nan
 from typing import TYPE_CHECKING, Any
 
 import uvicorn
-from prometheus_client import CollectorRegistry, ProcessCollector, make_asgi_app
+from prometheus_client import CollectorRegistry, ProcessCollector
+from prometheus_client.exposition import choose_encoder
+from starlette.requests import Request
+from starlette.responses import Response
+from starlette.types import Receive, Scope, Send
 
 from watcher import assembly
+from watcher.daemon.threads import in_thread
 from watcher.errors import UsageError, WatcherError
 from watcher.ledger.store import Ledger
 from watcher.look import acknowledge
-from watcher.metrics import LedgerCollector, Snapshot
-from watcher.records import Head, Standing
+from watcher.metrics import LedgerCollector, Snapshot, possible_reasons
+from watcher.records import Head, SourceState, Standing, Terms
 from watcher.settings import WebTable
 from watcher.web.app import Site, create_app
 
@@ -49,54 +57,108 @@ class Reader:
             handle.close()
 
 
-class _Asgi:
-    """Starlette treats a function as a request handler; an instance it treats as an application."""
-
-    def __init__(self, inner: Any) -> None:
-        self._inner = inner
-
-    async def __call__(self, scope: Any, receive: Any, send: Any) -> None:
-        await self._inner(scope, receive, send)
-
-
 class Snapshots:
-    """What a scrape shows; the part that only looks can change is read again when the newest look changed."""
+    """What a scrape shows; the part that only looks can change is read again when the newest look changed.
+
+    While the ledger cannot be read, what was read last stays, beside the promises, sources and routes of the configuration:
+    no series comes or goes with the ledger's health.
+    """
 
     def __init__(self, service: Service, reader: Reader) -> None:
         self._service = service
         self._reader = reader
-        self._known: tuple[Head, list[Standing], dict[str, dict[str, int]]] | None = None
+        self._lock = threading.Lock()
+        self._seen = _Seen()
 
-    def __call__(self) -> Snapshot | None:
-        """A snapshot; None while the ledger cannot be read."""
+    def __call__(self) -> Snapshot:
+        """A snapshot of now."""
+        with self._lock:
+            try:
+                self._seen = self._read()
+                readable = True
+            except WatcherError:
+                self._reader.close()
+                readable = False
+            return self._made(self._seen, readable=readable)
+
+    def _read(self) -> _Seen:
+        ledger = self._reader()
+        head = ledger.head()
+        old = self._seen
+        fresh = old.head != head
+        return _Seen(
+            head=head,
+            newest=ledger.newest_at(),
+            standings=ledger.standings(open_only=True) if fresh else old.standings,
+            terms=[stored.terms for stored in ledger.terms()] if fresh else old.terms,
+            rejects=ledger.reject_counts() if fresh else old.rejects,
+            states={state.source: state for state in ledger.source_states()},
+            notices=ledger.notice_counts(),
+            size=ledger.size_bytes(),
+        )
+
+    def _made(self, seen: _Seen, *, readable: bool) -> Snapshot:
         parts = self._service.parts
-        try:
-            ledger = self._reader()
-            head = ledger.head()
-            if self._known is None or self._known[0] != head:
-                self._known = (head, ledger.standings(open_only=True), ledger.reject_counts())
-            _, standings, rejects = self._known
-            states = {state.source: state for state in ledger.source_states()}
-            notices, size = ledger.notice_counts(), ledger.size_bytes()
-        except WatcherError:
-            return None
-        seen = {(standing.promise, standing.version) for standing in standings}
-        terms = [promise.terms for watch in parts.watches.values() for promise in watch.promises if not promise.retired]
-        owner = {each.promise: each.source for each in terms}
-        from watcher.records import SourceState
-
+        watched = [promise for watch in parts.watches.values() for promise in watch.promises]
+        retired = {(each.terms.promise, each.terms.version) for each in watched if each.retired}
+        known = {(terms.promise, terms.version) for terms in seen.terms}
+        new = [e.terms for e in watched if (e.terms.promise, e.terms.version) not in known | retired]
+        living = [terms for terms in (*seen.terms, *new) if (terms.promise, terms.version) not in retired]
         return Snapshot(
-            standings=standings,
-            waiting=[each for each in terms if (each.promise, each.version) not in seen],
-            sources=[states.get(name, SourceState(name)) for name in parts.watches],
-            rejected={(owner.get(promise, ""), promise): reasons for promise, reasons in rejects.items()},
-            notices=notices,
+            standings=[s for s in seen.standings if (s.promise, s.version) not in retired],
+            waiting=new,
+            sources=[seen.states.get(name, SourceState(name)) for name in parts.watches],
+            rejected={
+                (terms.source, terms.promise): {
+                    **dict.fromkeys(possible_reasons(terms), 0),
+                    **seen.rejects.get(terms.promise, {}),
+                }
+                for terms in living
+            },
+            notices=seen.notices,
             routes=[route.name for route in parts.routes],
             lease_held=self._service.lease_held,
-            head=head,
-            ledger_bytes=size,
+            head=seen.head or Head(0, ""),
+            ledger_bytes=seen.size,
             version=version("promise-watcher"),
+            readable=readable,
+            clock_behind=max(0.0, seen.newest - self._service.hooks.clock().timestamp()),
         )
+
+
+@dataclass(frozen=True, slots=True)
+class _Seen:
+    """What was last read from the ledger; empty before the first time."""
+
+    head: Head | None = None
+    newest: int = 0
+    standings: Sequence[Standing] = ()
+    terms: Sequence[Terms] = ()
+    rejects: Mapping[str, Mapping[str, int]] = field(default_factory=dict)
+    states: Mapping[str, SourceState] = field(default_factory=dict)
+    notices: Mapping[tuple[str, str], int] = field(default_factory=dict)
+    size: float = nan
+
+
+class Scrape:
+    """/metrics: text or OpenMetrics as the scraper prefers, made in a thread, since the ledger may be slow to answer.
+
+    An instance, because Starlette takes a function for a handler of requests.
+    """
+
+    def __init__(self, registry: CollectorRegistry) -> None:
+        self._registry = registry
+
+    async def __call__(self, scope: Scope, receive: Receive, send: Send) -> None:
+        """Answer one scrape."""
+        request = Request(scope)
+        encode, kind = choose_encoder(", ".join(request.headers.getlist("accept")))
+        text = await in_thread(encode, self._registry)
+        headers = {"content-type": kind, "vary": "Accept, Accept-Encoding"}
+        if "gzip" in request.headers.get("accept-encoding", ""):
+            text = gzip.compress(text, compresslevel=1)
+            headers["content-encoding"] = "gzip"
+        await Response(text, headers=headers)(scope, receive, send)
 
 
 def web_app(service: Service) -> Any:
@@ -120,7 +182,7 @@ def web_app(service: Service) -> Any:
         tokens_required=not loopback,
         acknowledge=acknowledged,
         ready=service.ready,
-        metrics=_Asgi(make_asgi_app(registry=registry)),
+        metrics=Scrape(registry),
         render=service.renderer.svg,
         fdr=settings.report.fdr,
     )

@@ -1,0 +1,54 @@
+"""Holding the ledger as its one writer, and holding the configuration to it."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from contextlib import ExitStack
+from dataclasses import dataclass
+
+from watcher.assembly import open_ledger
+from watcher.daemon.parts import Parts
+from watcher.errors import UsageError
+from watcher.ledger.store import Ledger
+from watcher.look import recognise
+from watcher.settings import Settings
+
+
+@dataclass(frozen=True, slots=True)
+class Held:
+    """A ledger that this process alone writes, until it is closed."""
+
+    ledger: Ledger
+    _stack: ExitStack
+
+    def close(self) -> None:
+        """Give lock, lease and connections back."""
+        self._stack.close()
+
+
+def hold(settings: Settings, at_point: Callable[[str], None]) -> Held:
+    """Open the ledger and become its writer. Raises SchemaMismatch, LedgerBusy while another writes, WatcherError."""
+    with ExitStack() as stack:
+        ledger = stack.enter_context(open_ledger(settings, write=True))
+        ledger.at_point = at_point
+        stack.enter_context(ledger.writer())
+        return Held(ledger, stack.pop_all())
+
+
+def check_terms(ledger: Ledger, parts: Parts) -> None:
+    """Compare the configuration with the frozen terms. Raises TermsChanged, and UsageError where a source is missing."""
+    for name, watch in parts.watches.items():
+        recognise(ledger, name, watch.promises)
+    retired = {
+        (promise.terms.promise, promise.terms.version)
+        for watch in parts.watches.values()
+        for promise in watch.promises
+        if promise.retired
+    }
+    for term in ledger.terms():
+        terms = term.terms
+        if terms.source not in parts.watches and (terms.promise, terms.version) not in retired:
+            raise UsageError(
+                f"source {terms.source!r} is not in the configuration, and promise {terms.promise!r} version "
+                f"{terms.version!r} rests on it: keep the source, or say retired = true for the promise first"
+            )
