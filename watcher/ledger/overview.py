@@ -74,18 +74,24 @@ def _promise(stored: StoredTerm, rows: list[Any], days: tuple[Recent, ...]) -> P
 
 def _newest(connection: Connection) -> Mapping[int, list[Any]]:
     """Term -> the newest verdict row of each of its cells."""
-    inner = VERDICT.alias()
-    # A subquery for each cell is one step in the index (cell, day); grouping would read all of it, a year of days a cell.
-    newest = select(func.max(inner.c.day)).where(inner.c.cell == CELL.c.id).scalar_subquery()
+    # A subquery for each cell is one step in the index (cell, day). Grouping, or a join, would read all of the history.
+    body = (
+        select(VERDICT.c.body)
+        .where(VERDICT.c.cell == CELL.c.id)
+        .order_by(VERDICT.c.day.desc())
+        .limit(1)
+        .correlate(CELL)
+        .scalar_subquery()
+    )
     statement = (
-        select(CELL.c.term, CELL.c.column, CELL.c.value, CELL.c.part, CELL.c.discovered, VERDICT.c.body)
+        select(CELL.c.term, CELL.c.column, CELL.c.value, CELL.c.part, CELL.c.discovered, body.label("body"))
         .join_from(CELL, TERM, TERM.c.id == CELL.c.term)
-        .join(VERDICT, (VERDICT.c.cell == CELL.c.id) & (VERDICT.c.day == newest))
         .where(TERM.c.closed_by.is_(None))
     )
     found: dict[int, list[Any]] = {}
     for row in connection.execute(statement):
-        found.setdefault(row.term, []).append(row)
+        if row.body is not None:
+            found.setdefault(row.term, []).append(row)
     return found
 
 

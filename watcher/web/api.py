@@ -278,7 +278,7 @@ def _acting_routes(made: APIRouter, site: Site, access: Access) -> None:
     def rejects(
         visitor: Annotated[Visitor, actor],
         promise: Annotated[str, Query(min_length=1, max_length=80)],
-        format: Form = "json",
+        format: Form = "json",  # noqa: A002
     ) -> Any:
         """Rows that the newest look could not use; needs the role act, because raw rows may hold personal data."""
         del visitor

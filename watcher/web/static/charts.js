@@ -38,19 +38,6 @@ function tell(handler, event, item, value) {
   box.style.top = `${Math.max(4, event.clientY - box.offsetHeight - 14)}px`;
 }
 
-// The library's interpreter (the one that needs no eval) takes datetime(milliseconds) for a year: give axes their numbers.
-function plainDomains(spec) {
-  for (const scale of spec.scales ?? []) {
-    const ends = (scale.domain?.fields ?? []).flatMap((field) => {
-      if (Array.isArray(field)) return field;
-      const found = /^\{data: datetime\((-?\d+)\)\}$/.exec(field.signal ?? '');
-      return found ? [Number(found[1])] : [NaN];
-    });
-    if (ends.length && ends.every(Number.isFinite)) scale.domain = [Math.min(...ends), Math.max(...ends)];
-  }
-  return spec;
-}
-
 async function draw(plot) {
   const address = new URL(plot.dataset.spec, location.href);
   address.searchParams.set('scheme', dark.matches ? 'dark' : 'light');
@@ -64,7 +51,7 @@ async function draw(plot) {
     try {
       plot.view?.finalize();
       plot.view = await embed(place, await answer.json(), {
-        ast: true, actions: false, renderer: 'svg', defaultStyle: false, tooltip: tell, patch: plainDomains, logLevel: 1,
+        ast: true, actions: false, renderer: 'svg', defaultStyle: false, tooltip: tell,
       });
     } catch (error) {
       plot.replaceChildren(...plot.drawn);
