@@ -234,7 +234,7 @@ def _sign_in(page, token):
     page.get_by_role("link", name="Sign in", exact=True).first.press("Enter")
     page.get_by_label("Token").press_sequentially(token)
     page.keyboard.press("Enter")
-    page.wait_for_load_state("networkidle")
+    page.get_by_role("button", name="Sign out").wait_for()
 
 
 def test_a_wrong_token_is_told(chromium, drawn):

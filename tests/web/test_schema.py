@@ -15,7 +15,7 @@ from schemathesis import GenerationMode
 from web.world import House, serving
 
 EXAMPLES = settings(
-    max_examples=20, deadline=None, derandomize=True, database=None, suppress_health_check=list(HealthCheck)
+    max_examples=12, deadline=None, derandomize=True, database=None, suppress_health_check=list(HealthCheck)
 )
 KNOWN = {
     "name": "damage-photos",
