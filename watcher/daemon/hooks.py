@@ -26,8 +26,8 @@ class Hooks:
     clock: Callable[[], datetime] = wall_clock
     timer: Callable[[], float] = time.monotonic
     at_point: Callable[[str], None] = _nowhere
-    """Points: before-look, before-pull, mid-pull, after-pull, those of a commit (ledger/store.py), before-send,
-    after-send."""
+    """Points: held-by-another, before-look, before-pull, mid-pull, after-pull, those of a commit (ledger/store.py),
+    before-send, after-send."""
     started: Callable[[str], None] = _nowhere
     """Called once with the address when page and metrics are served."""
     adjust: Callable[[Settings], Settings] = field(default=lambda settings: settings)

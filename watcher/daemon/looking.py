@@ -28,6 +28,16 @@ PATIENCE: Final = 10.0
 
 
 @dataclass(frozen=True, slots=True)
+class Looked:
+    """What the schedule must know of a look."""
+
+    again: float | None = None
+    """Seconds until the next try, if that is not at the usual time."""
+    written: bool = False
+    """Something was recorded: notices may wait."""
+
+
+@dataclass(frozen=True, slots=True)
 class _Quiet:
     """What makes a look needless: files with this signature bring nothing before `until` (epoch seconds)."""
 
@@ -51,11 +61,8 @@ class Looker:
         """After a reload nothing is taken for unchanged."""
         self._quiet.clear()
 
-    def look(self, ledger: Ledger, watch: Watch, routings: Sequence[Routing]) -> float | None:
-        """One look; returns after how many seconds to try again if not at the usual time.
-
-        Raises Cancelled when the daemon stops; nothing else.
-        """
+    def look(self, ledger: Ledger, watch: Watch, routings: Sequence[Routing]) -> Looked:
+        """One look. Raises Cancelled when the daemon stops; nothing else."""
         structlog.contextvars.clear_contextvars()
         structlog.contextvars.bind_contextvars(source=watch.source.name)
         turn = self._turns.acquire(timeout=PATIENCE)
@@ -65,10 +72,10 @@ class Looker:
             raise
         except ClockWentBack as error:
             self._log.error("clock-went-back", seconds=error.newest - error.now, detail=str(error))
-            record_step_back(ledger, watch.source.name, error, routings, self._log)
+            return Looked(written=record_step_back(ledger, watch.source.name, error, routings, self._log))
         except LedgerBusy as error:
             self._log.warning("the look was thrown away", detail=str(error))
-            return min(float(watch.table.every), FIRST_RETRY)
+            return Looked(min(float(watch.table.every), FIRST_RETRY))
         except WatcherError as error:
             self._log.error("the look failed; the counts stay", detail=str(error))
         except Exception:  # noqa: BLE001 - logged with its trace; the daemon must outlive it
@@ -77,9 +84,9 @@ class Looker:
             self.tried.add(watch.source.name)
             if turn:
                 self._turns.release()
-        return None
+        return Looked()
 
-    def _look(self, ledger: Ledger, watch: Watch, routings: Sequence[Routing]) -> float | None:
+    def _look(self, ledger: Ledger, watch: Watch, routings: Sequence[Routing]) -> Looked:
         name = watch.source.name
         self._hooks.at_point("before-look")
         now = int(self._hooks.clock().timestamp())
@@ -90,7 +97,7 @@ class Looker:
             raise ClockWentBack(now, newest)
         signature = _signature(watch)
         if self._nothing_new(ledger, watch, signature, now):
-            return None
+            return Looked()
         outcome = attempt(
             ledger,
             watch.source,
@@ -102,11 +109,11 @@ class Looker:
         )
         self._tell(outcome)
         if outcome.failed:
-            return self._later(watch)
+            return Looked(self._later(watch), outcome.written)
         self._failures.pop(name, None)
         if signature is not None:
             self._remember(ledger, watch, signature, has_future=outcome.has_future)
-        return None
+        return Looked(written=outcome.written)
 
     def _nothing_new(self, ledger: Ledger, watch: Watch, signature: str | None, now: int) -> bool:
         name = watch.source.name

@@ -128,6 +128,7 @@ class Service:
             except SchemaMismatch:
                 raise
             except LedgerBusy as error:
+                self._hooks.at_point("held-by-another")
                 self._why_waiting, pause = str(error), HELD
                 told = "another process holds the ledger; waiting until it lets go"
             except Exception as error:  # noqa: BLE001 - whatever keeps the ledger away, the daemon waits for it
@@ -207,7 +208,8 @@ class Service:
 
         async def job() -> None:
             # Shielded: the scheduler cancels its jobs when it is shut down, and a commit must come to its end.
-            await asyncio.shield(self._keep(work()))
+            with contextlib.suppress(asyncio.CancelledError):
+                await asyncio.shield(self._keep(work()))
 
         now = datetime.now(UTC)
         self._scheduler.add_job(
@@ -249,11 +251,13 @@ class Service:
         if ledger is None or watch is None or self._stop.is_set():
             return
         try:
-            again = await in_thread(self._looker.look, ledger, watch, self._parts.routings)
+            looked = await in_thread(self._looker.look, ledger, watch, self._parts.routings)
         except Cancelled:
             return
-        if again is not None and self._scheduler is not None:
-            when = datetime.now(UTC) + timedelta(seconds=again)
+        if looked.written:
+            await self._post()
+        if looked.again is not None and self._scheduler is not None:
+            when = datetime.now(UTC) + timedelta(seconds=looked.again)
             with contextlib.suppress(LookupError):
                 self._scheduler.modify_job(f"look {name}", next_run_time=when)
 

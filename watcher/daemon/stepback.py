@@ -16,12 +16,12 @@ from watcher.verdict import moment
 KIND = "clock-went-back"
 
 
-def record_step_back(ledger: Ledger, source: str, error: ClockWentBack, routings: Sequence[Routing], log: Any) -> None:
-    """Write the event behind the newest look, unless it stands there already; an error of the ledger is logged."""
+def record_step_back(ledger: Ledger, source: str, error: ClockWentBack, routings: Sequence[Routing], log: Any) -> bool:
+    """Write the event behind the newest look and return True, unless it stands there already; an error is logged."""
     try:
         told = ledger.events(kinds=(KIND,), limit=1)
         if told and told[0].at == moment(error.newest):
-            return
+            return False
         expected, _ = ledger.newest_look(source)
         facts = {"clock": moment(error.now).isoformat(), "newest": moment(error.newest).isoformat()}
         events = (Event(KIND, "", "", "", "", None, facts),)
@@ -43,3 +43,5 @@ def record_step_back(ledger: Ledger, source: str, error: ClockWentBack, routings
             ledger.record_answers(replace(notice, next_at=moment(error.now)) for notice in waiting)
     except WatcherError as failure:
         log.warning("the step back of the clock could not be recorded", detail=str(failure))
+        return False
+    return True
