@@ -22,7 +22,8 @@ COLUMNS = "{'parcel': 'VARCHAR', 'decided_at': 'TIMESTAMP', 'depot': 'VARCHAR', 
 
 BARE = """
 import duckdb, json, resource, sys, time
-connection = duckdb.connect(config={"enable_progress_bar": "false"})
+connection = duckdb.connect()
+connection.execute("SET enable_progress_bar = false")
 read = f"read_csv('{sys.argv[1]}', header = true, auto_detect = false, delim = ',', quote = '', columns = {sys.argv[2]})"
 sql = (
     "SELECT epoch_ms(decided_at) // 86400000 AS bucket, depot, count(*), count(observed), "

@@ -70,7 +70,7 @@ def test_a_clock_set_back_across_midnight_revisits_no_day() -> None:
     """St John's turned its clock from 00:01 to 23:01 of the day before until 2011: days stay spans without holes."""
     starts = bucket_starts(epoch("2010-10-01T12:00Z"), epoch("2010-12-01T00:00Z"), 86_400, "America/St_Johns")
 
-    assert {86_400, 90_000} == {b - a for a, b in itertools.pairwise(starts)}
+    assert {86_400, 90_000} == {b - a for a, b in itertools.pairwise(starts[1:])}
     assert starts == sorted(set(starts))
 
 

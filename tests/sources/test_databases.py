@@ -29,8 +29,8 @@ def failure(spec: SourceSpec, **asked: object) -> SourceFailed:
 @pytest.mark.peer("postgresql")
 @pytest.mark.parametrize("design", ["positive", "loss", "weight", "chosen", "cluster"])
 def test_postgresql_agrees_over_many_rows(postgresql: str, design: str) -> None:
-    """4,000 rows with clusters, weights, losses and late labels: the plain count and PostgreSQL agree."""
-    rows = random_rows(23, 4000, TIMES)
+    """1,500 rows with clusters, weights, losses and late labels: the plain count and PostgreSQL agree."""
+    rows = random_rows(23, 1500, TIMES)
     q = question(
         design,
         labelled_at=True,
