@@ -4,10 +4,10 @@ from __future__ import annotations
 
 from watcher.errors import SettingsError
 from watcher.ledger.store import Ledger
-from watcher.look import Routing, Watched
+from watcher.look import Evidence, Routing, Watched
 from watcher.notices.base import RouteSpec
 from watcher.notices.routes import Hidden, route_of
-from watcher.settings import RouteTable, Settings, SourceTable
+from watcher.settings import PromiseTable, RouteTable, Settings, SourceTable
 from watcher.sources import open_source
 from watcher.sources.base import Source, SourceSpec
 
@@ -52,10 +52,17 @@ def watched(settings: Settings, source: str) -> list[Watched]:
             promise.staleness,
             promise.uncertified or promise.release_evidence is None,
             promise.retired,
+            evidence_of(promise),
         )
         for promise in settings.promise
         if promise.source == source
     ]
+
+
+def evidence_of(promise: PromiseTable) -> Evidence | None:
+    """The release evidence as a record."""
+    given = promise.release_evidence
+    return None if given is None else Evidence(given.labels, given.errors, given.models)
 
 
 def routings(settings: Settings) -> list[Routing]:

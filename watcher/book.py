@@ -48,7 +48,8 @@ def discovered(known: Sequence[Cell], rows: Iterable[CellCounts]) -> tuple[Cell,
 
 def sealing(terms: Terms, sealed_until: int, now: int) -> tuple[tuple[int, ...], int]:
     """Starts of the buckets that a successful look at `now` seals, and the end of the newest one."""
-    starts = bucket_starts(terms.released, now - terms.label_lag, terms.bucket, terms.time_zone)
+    # One second more: a bucket that ends exactly label_lag ago is due, and its end is the start of the next.
+    starts = bucket_starts(terms.released, now - terms.label_lag + 1, terms.bucket, terms.time_zone)
     done, end = [], sealed_until
     for start, stop in pairwise(starts):
         if start >= sealed_until and stop + terms.label_lag <= now:

@@ -3,22 +3,29 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass
-from typing import Literal
+from typing import Final, Literal
 
 from watcher import assembly
-from watcher.book import first_cells
-from watcher.bounds import windows
-from watcher.bounds.exact import exact_upper
+from watcher.book import discovered, first_cells, sealing
+from watcher.book import table as table_of
+from watcher.bounds.deciding import labels_to_decide
+from watcher.bounds.planning import WEEK, WIDTHS, bucket_fits, smallest_rise, widest_bucket
+from watcher.bounds.release import certify
 from watcher.errors import SettingsError, UsageError, WatcherError
 from watcher.judging import threshold
-from watcher.look import Watched, question, recognise
-from watcher.records import Tally, Terms
+from watcher.look import OneSided, Watched, question, recognise, refuse_one_sided, sealed_counts, weak_evidence
+from watcher.path import entered, total
+from watcher.records import Cell, CellCounts, Tally, Terms
 from watcher.settings import PromiseTable, Settings, SourceTable, duration
 from watcher.sources.base import Source, Survey
 from watcher.text import safe
 from watcher.verdict import moment
+from watcher.wording import percent
+
+SHOWN: Final = 9
+"""Cells whose smallest noticeable rise `check` tells."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -74,30 +81,25 @@ def _ledger(settings: Settings) -> Iterator[Finding]:
 
 
 def _evidence(promise: PromiseTable, source: SourceTable) -> Iterator[Finding]:
-    about, evidence = f"promise {promise.name}", promise.release_evidence
+    about, evidence, terms = f"promise {promise.name}", assembly.evidence_of(promise), promise.terms(source)
+    weak = None if evidence is None else weak_evidence(terms, evidence)
     if evidence is None:
         yield Finding("warning", about, "no release_evidence: the promise is shown as uncertified")
-    elif promise.measure == "loss":
-        yield Finding("warning", about, "release_evidence counts errors and cannot bear out a promise about a loss")
+    elif weak is None:
+        found = certify(evidence.labels, evidence.errors, promise.risk, evidence.models)
+        best = f", the best of {evidence.models} models," if evidence.models > 1 else ""
+        told = f"{evidence.errors:,} errors in {evidence.labels:,} labels{best} bear out a tolerance of {_up(found.exact, 5)}"
+        yield Finding("fact", about, f"{told} at risk {promise.risk} (by Hoeffding {_up(found.hoeffding, 5)})")
+    elif promise.uncertified:
+        yield Finding("warning", about, f"{weak.what}: shown as uncertified")
     else:
-        bears = float(exact_upper(evidence.labels, evidence.errors, promise.risk / evidence.models))
-        told = f"{evidence.errors} errors in {evidence.labels} labels bear out a tolerance of {_up(bears)} at risk {promise.risk}"
-        if bears <= promise.tolerance:
-            yield Finding("fact", about, told)
-        elif promise.uncertified:
-            yield Finding("warning", about, f"{told}, not {promise.tolerance}: shown as uncertified")
-        else:
-            yield Finding(
-                "problem",
-                about,
-                f"{told}, not {promise.tolerance}. Promise {_up(bears)}, bring more labels, or set uncertified = true, "
-                "which every page then shows",
-            )
-    yield from _design(promise.terms(source))
+        yield Finding("problem", about, f"{weak.what}. {weak.way_out}")
+    yield from _design(terms)
 
 
-def _up(value: float) -> str:
-    return f"{math.ceil(value * 1e5) / 1e5:.5f}".rstrip("0")
+def _up(value: float, decimals: int) -> str:
+    scale = 10**decimals
+    return f"{math.ceil(value * scale) / scale:.{decimals}f}".rstrip("0").rstrip(".")
 
 
 def _design(terms: Terms) -> Iterator[Finding]:
@@ -138,6 +140,11 @@ def _promise(source: Source, table: SourceTable, watched: Watched, now: int) -> 
         return
     yield from _rows(about, tally)
     yield from _values(about, survey, terms)
+    until = sealing(terms, terms.released, now)[1]
+    try:
+        refuse_one_sided(source, asked, sealed_counts(table_of(tally.cells), until))
+    except OneSided as error:
+        yield Finding("problem", about, str(error))
     if survey.first_time is not None:
         yield Finding("fact", about, f"first prediction found at {moment(survey.first_time).isoformat()}")
         if survey.first_time > terms.released + terms.bucket:
@@ -146,7 +153,7 @@ def _promise(source: Source, table: SourceTable, watched: Watched, now: int) -> 
                 about,
                 f"released at {moment(terms.released).isoformat()}: what lay before the first row is missing",
             )
-    yield from _volume(about, terms, tally, now)
+    yield from _advice(about, terms, tally, now)
 
 
 def _rows(about: str, tally: Tally) -> Iterator[Finding]:
@@ -184,24 +191,106 @@ def _values(about: str, survey: Survey, terms: Terms) -> Iterator[Finding]:
         )
 
 
-def _volume(about: str, terms: Terms, tally: Tally, now: int) -> Iterator[Finding]:
-    """Whether a bucket is fine enough for the volume that was seen."""
-    whole = [row.counts for row in tally.cells if row.column == ""]
-    labels, spent = sum(c.labels for c in whole), max(now - terms.released, terms.bucket)
-    a_bucket = labels * terms.bucket / spent
-    if not labels or not 0 < 2 * terms.tolerance < 1:
+@dataclass(frozen=True, slots=True)
+class Volume:
+    """What a cell has brought so far."""
+
+    cell: Cell
+    labels: int
+    """Of the measure: for `miss` the labelled positives, for `false-alarm` the negatives."""
+    errors: float
+    weeks: float
+    """Over which these were counted."""
+    per_week: float
+
+
+def volumes(terms: Terms, cells: Sequence[Cell], rows: Iterable[CellCounts], now: int) -> list[Volume]:
+    """Labels a week of every cell, from the buckets whose label lag is over; while there is none, from all rows.
+
+    `rows` since the release; `now` in epoch seconds.
+    """
+    counts = table_of(rows)
+    until = sealing(terms, terms.released, now)[1]
+    complete = until > terms.released
+    span = (until if complete else max(now, terms.released + terms.bucket)) - terms.released
+    found = []
+    for cell in cells:
+        buckets = [levels for start, levels in counts.get(cell.key, {}).items() if not complete or start < until]
+        pairs = [entered(terms, total(levels)) for levels in buckets]
+        labels = sum(n for n, _ in pairs)
+        found.append(Volume(cell, labels, float(sum(k for _, k in pairs)), span / WEEK, labels * WEEK / span))
+    return found
+
+
+def plain_labels(terms: Terms) -> bool:
+    """Whether one label is one trial: what plans are made for (method.md section 7)."""
+    others = (terms.weight_levels, terms.n_max, terms.labelling_probabilities, terms.label_noise)
+    return terms.measure != "loss" and not any(others)
+
+
+def _advice(about: str, terms: Terms, tally: Tally, now: int) -> Iterator[Finding]:
+    """What the volume that was seen allows: bucket width, the smallest rise that can be noticed, a decision at all."""
+    if not plain_labels(terms):
         return
-    own, bar = threshold(terms.risk, first_cells(terms)[0].part)
-    count = windows.restarts(terms.service_life, terms.bucket)
-    share = float(windows.BREACH.shares(count, 2)[1])
-    eps = terms.tolerance
-    gain = 2 * eps * math.log(2) + (1 - 2 * eps) * math.log((1 - 2 * eps) / (1 - eps))
-    room = (bar - math.log(share)) / gain / 10
-    if a_bucket > room and terms.bucket > 3600:
+    cells = first_cells(terms)
+    seen = volumes(terms, (*cells, *discovered(cells, tally.cells)), tally.cells, now)
+    whole = seen[0]
+    if not whole.labels:
+        return
+    own = threshold(terms.risk, whole.cell.part)[0]
+    life = whole.per_week * terms.service_life / WEEK
+    yield from _bucket(about, terms, own, whole.per_week)
+    yield from _rises(about, terms, seen)
+    left = whole.per_week * max(terms.released + terms.service_life - now, 0) / WEEK
+    needed = labels_to_decide(whole.labels, int(whole.errors), terms.tolerance, own)[1]
+    if needed is None or needed > left:
+        told = "over 1,000,000 more labels" if needed is None else f"{needed:,} more labels"
         yield Finding(
             "warning",
             about,
-            f"a bucket of {duration(terms.bucket)} holds about {a_bucket:,.0f} labels; at most {room:,.0f} keep a doubled error from "
-            "waiting for the end of its bucket: a narrower bucket notices it sooner",
+            f"at the rate seen, {percent(whole.errors / whole.labels)}, and {whole.per_week:,.0f} labels a week this promise can be "
+            f"neither supported nor refuted in its service life with any certainty: nine in ten such cases need up to {told}, some "
+            f"{left:,.0f} will come. {_smallest(terms, own, life)} `watcher plan` tells what more labels would change",
         )
-    del own
+
+
+def _bucket(about: str, terms: Terms, own: float, per_week: float) -> Iterator[Finding]:
+    if bucket_fits(terms.tolerance, own, per_week, terms.bucket, terms.service_life):
+        return
+    widest = widest_bucket(terms.tolerance, own, per_week, terms.service_life)
+    way_out = "an hour, the narrowest, is best" if widest is None else f'bucket = "{_width(widest)}" would do'
+    if widest is None and terms.bucket <= min(WIDTHS):
+        return
+    yield Finding(
+        "warning",
+        about,
+        f"a bucket of {duration(terms.bucket)} holds about {per_week * terms.bucket / WEEK:,.0f} labels: a doubled error waits for the "
+        f"end of its bucket; {way_out}",
+    )
+
+
+def _width(seconds: int) -> str:
+    return "1d" if seconds == 86400 else f"{seconds // 3600}h"
+
+
+def _rises(about: str, terms: Terms, seen: Sequence[Volume]) -> Iterator[Finding]:
+    told = []
+    for volume in seen[:SHOWN]:
+        own = threshold(terms.risk, volume.cell.part)[0]
+        rise = smallest_rise(terms.tolerance, own, int(volume.per_week * terms.service_life / WEEK))
+        name = f"{safe(volume.cell.column)} = {safe(volume.cell.value)}" if volume.cell.column else "whole"
+        told.append(f"{name} {'none' if rise is None else f'{_up(rise, 2)}x'}")
+    more = f" and {len(seen) - SHOWN:,} further slices" if len(seen) > SHOWN else ""
+    yield Finding(
+        "fact",
+        about,
+        f"{seen[0].per_week:,.0f} labels a week; the smallest rise over the tolerance, present since the release, that is noticed "
+        f"within the service life with chance 90%: {', '.join(told)}{more}",
+    )
+
+
+def _smallest(terms: Terms, own: float, labels: float) -> str:
+    rise = smallest_rise(terms.tolerance, own, int(labels))
+    if rise is None:
+        return "Not even an error rate of 100% would be noticed in it."
+    return f"What a whole life can notice is {_up(rise, 2)} times the tolerance ({percent(min(1.0, rise * terms.tolerance), up=True)})."

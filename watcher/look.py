@@ -6,6 +6,7 @@ count, no sealing and no event writes nothing.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from datetime import datetime
@@ -13,14 +14,16 @@ from typing import Any, Final
 
 from watcher.book import Table, build, discovered, first_cells, next_sealing, sealing, table
 from watcher.bounds import METHOD
+from watcher.bounds.release import certify
 from watcher.diagnosis import diagnose
 from watcher.errors import SourceFailed, TermsChanged, UsageError, WatcherError
 from watcher.ledger.store import Ledger
 from watcher.ledger.terms import canonical_terms, terms_digest
-from watcher.path import NOTHING, total
+from watcher.path import NOTHING, add, total
 from watcher.records import (
     Cell,
     CellCounts,
+    Counts,
     Entry,
     Event,
     Failure,
@@ -37,12 +40,15 @@ from watcher.records import (
     Terms,
 )
 from watcher.sources.base import Source
+from watcher.sources.normal import text_of
 from watcher.verdict import Verdict, advance, moment
 
 GAP: Final = 7
 """A look that seals more buckets than this at once makes up for a gap: it sends one notice a promise and route."""
 GRAVEST: Final = ("breach", "support-lost", "warning", "supported", "warning-over")
 SAMPLES: Final = 20
+ONE_SIDED: Final = 1e-4
+"""Chance of refusing a measure wrongly because no label of one side was met yet."""
 
 
 class ClockWentBack(WatcherError):
@@ -67,6 +73,36 @@ class NothingInCommon(UsageError):
         )
 
 
+class WeakEvidence(UsageError):
+    """The release evidence of a promise does not bear out its tolerance."""
+
+    def __init__(self, promise: str, what: str, way_out: str) -> None:
+        self.promise, self.what, self.way_out = promise, what, way_out
+        super().__init__(f"promise {promise!r}: {what}. {way_out}")
+
+
+class OneSided(UsageError):
+    """The labels cannot support the measure: what would show the errors it counts is never labelled."""
+
+    def __init__(self, promise: str, measure: str, labels: int, side: str) -> None:
+        self.promise, self.measure = promise, measure
+        super().__init__(
+            f"promise {promise!r}: measure = {measure!r} is refused: of {labels:,} labelled samples none was predicted {side}, "
+            f"although such predictions are made; a {measure.replace('-', ' ')} could never be seen. Label samples whatever was "
+            'predicted, or give the promise a new version with measure = "error"'
+        )
+
+
+@dataclass(frozen=True, slots=True)
+class Evidence:
+    """The hold-out sample behind a tolerance."""
+
+    labels: int
+    errors: int
+    models: int = 1
+    """Among how many models, fixed beforehand, the released one was chosen on it."""
+
+
 @dataclass(frozen=True, slots=True)
 class Watched:
     """A promise as the configuration has it now."""
@@ -75,6 +111,7 @@ class Watched:
     stale_after: int
     uncertified: bool = False
     retired: bool = False
+    evidence: Evidence | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -151,9 +188,10 @@ def look(
     """One look at one source.
 
     `now` is in epoch seconds; `keep` False judges without writing; `further` events are recorded
-    with it. Raises ClockWentBack, TermsChanged, SourceFailed,
-    NothingInCommon, LedgerBusy; in each case nothing was written.
+    with it. Raises ClockWentBack, TermsChanged, SourceFailed, NothingInCommon, WeakEvidence, OneSided, LedgerBusy; in each
+    case nothing was written.
     """
+    refuse_weak_evidence(watched)
     if now < (newest := ledger.newest_at()):
         raise ClockWentBack(now, newest)
     expected, _ = ledger.newest_look(source.name)
@@ -295,6 +333,61 @@ def _refuse_strangers(source: Source, asked: Question, tally: Tally) -> None:
         raise NothingInCommon(asked.promise, (v for v, _ in survey.predictions), (v for v, _ in survey.labels))
 
 
+def weak_evidence(terms: Terms, evidence: Evidence) -> WeakEvidence | None:
+    """Why release evidence does not bear out the tolerance of a promise (method.md section 6); None when it does."""
+    if terms.measure == "loss":
+        what = "release_evidence counts errors and cannot bear out a promise about a loss"
+        return WeakEvidence(terms.promise, what, "Leave it out; the promise is then shown as uncertified")
+    found = certify(evidence.labels, evidence.errors, terms.risk, evidence.models)
+    if found.bears_out(terms.tolerance):
+        return None
+    best = f", the best of {evidence.models:,} models," if evidence.models > 1 else ""
+    least = f"{math.ceil(found.exact * 1e5) / 1e5:.5f}".rstrip("0")
+    return WeakEvidence(
+        terms.promise,
+        f"{evidence.errors:,} errors in {evidence.labels:,} labels{best} bear out a tolerance of {least} at risk {terms.risk}, not "
+        f"{terms.tolerance}",
+        f"Promise {least}, bring more labels, or set uncertified = true, which every page then shows",
+    )
+
+
+def refuse_weak_evidence(watched: Iterable[Watched]) -> None:
+    """Raise WeakEvidence for the first promise whose release evidence does not bear it out, unless it is uncertified."""
+    for each in watched:
+        if each.evidence is not None and not each.uncertified and not each.retired:
+            weak = weak_evidence(each.terms, each.evidence)
+            if weak is not None:
+                raise weak
+
+
+def refuse_one_sided(source: Source, asked: Question, sealed: Counts) -> None:
+    """Raise OneSided when all labels of the sealed buckets are on the side of the predictions that cannot err as measured.
+
+    If labels were drawn whatever was predicted, a false refusal EVER has chance below 1e-4: it takes as many labels as make
+    it that unlikely to have met none of the other side.
+    """
+    misses = asked.measure == "miss"
+    if not sealed.labels or not (misses or asked.measure == "false-alarm"):
+        return
+    positive = sealed.positives - sealed.misses + sealed.false_alarms
+    if (sealed.labels - positive if misses else positive) > 0:
+        return
+    known = source.survey(asked).predictions
+    every = sum(rows for _, rows in known)
+    likewise = sum(rows for value, rows in known if value == text_of(asked.positive))
+    other = every - likewise if misses else likewise
+    if other and sealed.labels * math.log1p(-min(other / every, 1.0 - 1e-12)) < math.log(ONE_SIDED):
+        raise OneSided(asked.promise, asked.measure, sealed.labels, "negative" if misses else "positive")
+
+
+def sealed_counts(counts: Table, until: int) -> Counts:
+    """Everything of the whole in the buckets before `until`."""
+    found = NOTHING
+    for start, levels in counts.get(("", ""), {}).items():
+        found = add(found, total(levels)) if start < until else found
+    return found
+
+
 def _judge(ledger: Ledger, source: Source, known: _Known, asked: Question, tally: Tally, now: int) -> _Result:
     terms = known.watched.terms
     new_cells = discovered(known.cells, tally.cells)
@@ -314,6 +407,8 @@ def _judge(ledger: Ledger, source: Source, known: _Known, asked: Question, tally
     )
     digest = known.stored.digest if known.stored else terms_digest(terms)
     merged = _merge(stored, fresh, before)
+    if not known.unlisted:
+        refuse_one_sided(source, asked, sealed_counts(merged, until))
     verdict = advance(build(terms, digest, cells, merged, before, until, memories, stored), now, remarks)
     verdict = replace(verdict, standings=diagnose(terms, merged, until, now, verdict.standings))
     known_rejects = ledger.rejects(terms.promise)[0] if known.stored else {}

@@ -31,9 +31,7 @@ class DelayBar:
     p90: float | None
 
 
-def plan_chart(
-    bars: Sequence[DelayBar], life_weeks: float, *, width: int = 620, scheme: Scheme = "light"
-) -> Spec:
+def plan_chart(bars: Sequence[DelayBar], life_weeks: float, *, width: int = 620, scheme: Scheme = "light") -> Spec:
     """Median (dot) to 90% (end of the line) of the weeks until each rise is noticed; both figures, rise by rise.
 
     `life_weeks` > 0: the service life, where an arrow stands for "longer". Weeks are on a logarithmic scale.
