@@ -8,13 +8,14 @@ from __future__ import annotations
 import json
 import time
 from collections.abc import Callable
+from dataclasses import replace
 from datetime import UTC, datetime
 from fractions import Fraction
 from pathlib import Path
 
 import pytest
 from sqlalchemy import insert
-from web.world import demo_promise, house
+from web.world import Client, House, demo_promise, house
 
 from watcher.ledger.sheet import part_text
 from watcher.ledger.standing import standing_body
@@ -43,8 +44,6 @@ def standing(terms: Terms, day: int, part: Fraction) -> Standing:
 
 def fill(path: Path, promises: int, days: int, slices: int = 4) -> None:
     """A ledger of so many promises with a verdict a day and cell; written row by row, because 500 years of looks take long."""
-    from dataclasses import replace
-
     base, cells = demo_promise().terms, ("", *(f"value {i}" for i in range(slices)))
     part = Fraction(1, 10)
     bodies = [
@@ -88,7 +87,7 @@ def fill(path: Path, promises: int, days: int, slices: int = 4) -> None:
                         for day in range(days)
                     ],
                 )
-            row = {name: 1 for name in INTEGERS} | {"level": "", "newest": None, "sealed_by": 1, "cell": i * len(cells)}
+            row = dict.fromkeys(INTEGERS, 1) | {"level": "", "newest": None, "sealed_by": 1, "cell": i * len(cells)}
             connection.execute(insert(BUCKET), [{**row, "start": terms.released + day * DAY} for day in range(days)])
 
 
@@ -102,6 +101,24 @@ def best(work: Callable[[], object]) -> float:
     return min(times)
 
 
+def measured(served: House) -> dict[str, float]:
+    """Seconds of: an app alone, the overview by a new app, the overview kept, one promise, one page of the API."""
+    page = promise_path("promise-007", "1")
+    kept = served.client()
+    assert kept.get("/").status_code == 200
+
+    def read(path: str, client: Client) -> None:
+        assert client.get(path).status_code == 200
+
+    return {
+        "app": best(lambda: create_app(served.site)),
+        "overview": best(lambda: read("/", served.client())),
+        "kept": best(lambda: read("/", kept)),
+        "promise": best(lambda: read(page, kept)),
+        "history": best(lambda: read(f"/api/v1{page}/history?limit=50", kept)),
+    }
+
+
 @pytest.fixture(scope="module")
 def figures(tmp_path_factory: pytest.TempPathFactory) -> dict[tuple[int, int], dict[str, float]]:
     """(promises, days) -> seconds: the overview read afresh, the overview kept, one promise, one page of the API."""
@@ -110,21 +127,7 @@ def figures(tmp_path_factory: pytest.TempPathFactory) -> dict[tuple[int, int], d
         path = tmp_path_factory.mktemp("board") / "w.db"
         fill(path, promises, days)
         served = house(path)
-        page, api = promise_path("promise-007", "1"), "/api/v1" + promise_path("promise-007", "1") + "/history?limit=50"
-        kept = served.client()
-        assert kept.get("/").status_code == 200
-
-        def read(path: str, client=None, served=served) -> None:
-            # A new app has kept nothing; making it is not what is measured, and is small beside it.
-            assert (client or served.client()).get(path).status_code == 200
-
-        found[promises, days] = {
-            "app": best(lambda: create_app(served.site)),
-            "overview": best(lambda: read("/")),
-            "kept": best(lambda: read("/", kept)),
-            "promise": best(lambda: read(page, kept)),
-            "history": best(lambda: read(api, kept)),
-        }
+        found[promises, days] = measured(served)
         served.ledger.close()
     for key, each in found.items():
         print(key, {name: round(value, 3) for name, value in each.items()})
