@@ -56,8 +56,8 @@ class Run:
 
 RUNS = {
     "csv": Run("csv", growing=True),
-    "sqlite": Run("sqlite", every=14),
-    "postgresql": Run("postgresql", every=14),
+    "sqlite": Run("sqlite", every=21),
+    "postgresql": Run("postgresql", every=21),
     "slices": Run("csv", names=(SLICED,), every=14),
     "csv, all rows": Run("csv"),
     "sqlite, weekly": Run("sqlite"),
