@@ -20,6 +20,7 @@ from watcher.notices.due import Due, OpenBreach, due_now, notice_of
 from watcher.notices.message import Writer
 from watcher.notices.outbox import send_due
 from watcher.records import Head, Notice, Standing
+from watcher.text import safe
 
 
 class Poster:
@@ -64,7 +65,15 @@ class Poster:
             self._log.exception("sending failed unexpectedly; the notices wait", route=route.name)
         else:
             for tried in done.attempts:
-                self._log.info("notice tried", **{name: getattr(tried, name) for name in tried.__dataclass_fields__})
+                self._log.info(
+                    "message tried",
+                    route=tried.route,
+                    message=tried.message,
+                    notices=len(tried.keys),
+                    look=tried.look,
+                    outcome=tried.outcome,
+                    answer=safe(tried.answer, 200),
+                )
 
     def _may_send(self, ledger: Ledger) -> bool:
         if self._stopping():
