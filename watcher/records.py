@@ -239,7 +239,7 @@ class Tally:
     duplicates: int
     outside: int
     late_labels: int
-    """Labels of sealed buckets with labelled_at at or after end + label_lag (0 unless `labelled_at` is mapped)."""
+    """Labels of buckets that are sealed by now with labelled_at at or after end + label_lag (0 unless `labelled_at` is mapped)."""
     lines: int | None = None
     """Files: physical lines without headers and without newlines inside quoted fields."""
     blank: int = 0

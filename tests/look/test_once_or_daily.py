@@ -17,7 +17,7 @@ from watcher.look import Outcome, attempt
 from watcher.records import Event, Standing
 from watcher.replay import Replay
 
-DAYS = 120
+DAYS = 75
 
 
 def _look(ledger: Ledger, path: Path, day: int) -> Outcome:
@@ -43,13 +43,13 @@ def _timeless(standing: Standing) -> Standing:
 @pytest.mark.parametrize(("labelled_at", "seed"), [(True, 3), (False, 4)])
 def test_one_look_equals_daily_looks(tmp_path: Path, labelled_at: bool, seed: int) -> None:
     """With labelled_at: late labels and corrections in the rows; without it: rows that do not change after sealing."""
-    rows = year(seed, DAYS, 60, late=labelled_at, jump=60)
+    rows = year(seed, DAYS, 60, late=labelled_at, jump=25)
     path = tmp_path / "watcher.toml"
     path.write_text(configuration(labelled_at=labelled_at), encoding="utf-8")
     write(tmp_path / "rows.csv", rows)
     once, daily = Ledger.memory(), Ledger.memory()
     events: list[Event] = []
-    for day in range(1, DAYS + 9, 1):
+    for day in range(1, DAYS + 9):
         last = _look(daily, path, day)
         events += last.events
     only = _look(once, path, DAYS + 8)

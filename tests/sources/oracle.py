@@ -302,7 +302,11 @@ def count(rows: Sequence[Row], q: Question) -> dict[str, Any]:
     late = [
         item
         for item in late_candidates(rows, q)
-        if item.at is not None and q.released <= item.at < q.open_from and item.late and item.outcome is not None
+        if item.at is not None
+        and item.at >= q.released
+        and end_of(item.at, q) + q.label_lag <= q.now
+        and item.late
+        and item.outcome is not None
     ]
     return {
         "cells": {key: (*[total[name] for name in INTEGERS], newest.get(key)) for key, total in cells.items()},

@@ -104,7 +104,8 @@ class Statement(Stages):
         timed = self._texts(self._timed(self._exact(since=q.released)))
         late = sa.and_(
             timed.c.at >= q.released,
-            timed.c.at < q.open_from,
+            # Its bucket is sealed by now, also by this very look: one look over a year counts what daily looks counted.
+            self._local(sa.literal(q.now - q.label_lag)) > self._local(timed.c.at),
             timed.c.labelled_at < q.now,
             self._local(timed.c.labelled_at - q.label_lag) > self._local(timed.c.at),
             self._outcome_raw(timed).is_not(None),

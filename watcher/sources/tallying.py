@@ -118,7 +118,7 @@ def answer(statement: Statement, run: Run, source: str, slice_limit: int, sample
         _refuse(q, _sizes(statement, run, None), limit, source)
         raise
     late = 0
-    if q.columns.labelled_at and q.open_from > q.released:
+    if q.columns.labelled_at and q.now - q.label_lag > q.released:
         late = next(iter(run(statement.late_labels())))[0]
     return fold.tally(late)
 
