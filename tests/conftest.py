@@ -22,7 +22,9 @@ def pytest_collection_modifyitems(config: pytest.Config, items: list[pytest.Item
     kept, dropped = [], []
     for item in items:
         wanted = {mark.args[0] for mark in item.iter_markers("peer")}
-        lacking = {name: reason for name in sorted(wanted) if name in MISSING and (reason := MISSING[name]()) is not None}
+        lacking = {
+            name: reason for name in sorted(wanted) if name in MISSING and (reason := MISSING[name]()) is not None
+        }
         if lacking and os.environ.get("CI") != "true":
             dropped.append(item)
             for reason in lacking.values():

@@ -8,9 +8,10 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping, Sequence
 from dataclasses import replace
+from itertools import zip_longest
 from typing import Any, Final
 
-from watcher.bounds.diagnostics import labelled_share, mean_weight, over_dispersion, tipping_point
+from watcher.bounds.diagnostics import error_by_lag, labelled_share, mean_weight, over_dispersion, tipping_point
 from watcher.buckets import bucket_starts
 from watcher.path import NOTHING, Levels, entered, total
 from watcher.records import FLAGS, Standing, Terms
@@ -27,11 +28,20 @@ def diagnose(
     until: int,
     now: int,
     standings: Sequence[Standing],
+    memories: Sequence[Mapping[str, Any]] = (),
 ) -> tuple[Standing, ...]:
-    """The same standings with their diagnostics, and the flags `clustered` and `weights-off` where they apply."""
+    """The same standings with their diagnostics, and the flags `clustered` and `weights-off` where they apply.
+
+    `memories` beside the standings, as the verdict leaves them: arriving labels tell there how early and late ones differ.
+    """
     starts = [start for start in bucket_starts(terms.released, until, terms.bucket, terms.time_zone) if start < until]
     weekly = [start for start in starts if start < until - (until - terms.released) % WEEK]
-    return tuple(_diagnosed(terms, counts.get((s.column, s.value), {}), starts, weekly, now, s) for s in standings)
+    found = [_diagnosed(terms, counts.get((s.column, s.value), {}), starts, weekly, now, s) for s in standings]
+    lags = [_by_lag(memory) for memory in memories] if terms.count == "arriving" else []
+    return tuple(
+        replace(standing, diagnostics={**standing.diagnostics, "error_by_lag": lag}) if lag else standing
+        for standing, lag in zip_longest(found, lags)
+    )
 
 
 def _diagnosed(
@@ -74,6 +84,20 @@ def _weights(terms: Terms, buckets: Buckets, starts: Sequence[int]) -> tuple[flo
     ]
     seen = mean_weight(labels, terms.weight_levels)
     return _finite(seen.mean), seen.off
+
+
+def _by_lag(memory: Mapping[str, Any]) -> dict[str, Any] | None:
+    """Early labels against late ones over all sealed buckets; the whole alone keeps these tables."""
+    tables = memory.get("delays", ())
+    if not tables:
+        return None
+    seen = error_by_lag(*zip(*tables, strict=True))
+    return {
+        "early": _finite(seen.early),
+        "late": _finite(seen.late),
+        "early_labels": seen.early_labels,
+        "late_labels": seen.late_labels,
+    }
 
 
 def _finite(value: float) -> float | None:

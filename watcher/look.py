@@ -410,7 +410,7 @@ def _judge(ledger: Ledger, source: Source, known: _Known, asked: Question, tally
     if not known.unlisted:
         refuse_one_sided(source, asked, sealed_counts(merged, until))
     verdict = advance(build(terms, digest, cells, merged, before, until, memories, stored), now, remarks)
-    verdict = replace(verdict, standings=diagnose(terms, merged, until, now, verdict.standings))
+    verdict = replace(verdict, standings=diagnose(terms, merged, until, now, verdict.standings, verdict.memories))
     known_rejects = ledger.rejects(terms.promise)[0] if known.stored else {}
     events = [*_own_events(known, stored, fresh, previous, tally, known_rejects), *verdict.events]
     draft = TermDraft(
@@ -568,7 +568,7 @@ def _close(ledger: Ledger, old: StoredTerm, new: Terms, now: int) -> tuple[TermD
         sealed=(),
         sealed_until=old.sealed_until,
         remarks=remarks,
-        standings=diagnose(terms, counts, old.sealed_until, now, verdict.standings),
+        standings=diagnose(terms, counts, old.sealed_until, now, verdict.standings, verdict.memories),
         memories=verdict.memories,
         closed=True,
     )

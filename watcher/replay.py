@@ -110,7 +110,9 @@ class Replay:
             previous = state.pairs()
             before = state.apply(draft)
             verdict = advance(state.book(before, previous), entry.at, draft.remarks)
-            judged = diagnose(state.terms, state.counts, state.sealed_until, entry.at, verdict.standings)
+            judged = diagnose(
+                state.terms, state.counts, state.sealed_until, entry.at, verdict.standings, verdict.memories
+            )
             state.memories = {(s.column, s.value): m for s, m in zip(judged, verdict.memories, strict=True)}
             standings += judged
             memories += verdict.memories

@@ -17,9 +17,9 @@ HOUSE = Path(watcher.__file__).parent
 FLOORS = (
     ("cli",),
     ("daemon", "checking"),
-    ("assembly",),
+    ("assembly", "rehearsal"),
     ("web",),
-    ("look", "rehearsal", "replay", "drafting", "explanation"),
+    ("look", "replay", "drafting", "explanation"),
     ("sources", "ledger", "notices", "report", "metrics", "settings"),
     ("verdict", "book"),
     ("judging", "diagnosis"),
@@ -29,7 +29,7 @@ FLOORS = (
 )
 """The rooms from the roof down; a room imports only from lower floors. `demo` holds data for commands alone."""
 ROOMS = {room: -floor for floor, rooms in enumerate(FLOORS) for room in rooms}
-NOT_BUILT = {"rehearsal"}
+NOT_BUILT: set[str] = set()
 """Rooms that later work furnishes; whoever builds one takes it off this list, and from then on it must exist."""
 FACE = "__init__"
 """The face for a notebook: `watcher/__init__.py`, which shows `bounds` and nothing else."""

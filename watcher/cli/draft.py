@@ -16,7 +16,7 @@ from watcher.sources.base import SourceSpec
 @click.argument("place", metavar="FILE-OR-URL")
 @click.option("--table", metavar="T", help="With a URL: the table, or schema.table.")
 def draft(place: str, table: str | None) -> None:
-    """Look at the columns of a CSV or Parquet file or of a database table and write a configuration to standard output.
+    """Look at the columns of a CSV file or of a database table and write a configuration to standard output.
 
     Lines marked with an arrow need a decision.
     """
@@ -32,7 +32,7 @@ def draft(place: str, table: str | None) -> None:
 
     path = Path(place)
     if not path.exists():
-        raise UsageError(f"{place}: no such file; give a CSV or Parquet file, or the URL of a database with --table")
+        raise UsageError(f"{place}: no such file; give a CSV file, or the URL of a database with --table")
     _, text = draft_file(path)
     click.echo(text, nl=False)
 

@@ -19,6 +19,7 @@ from watcher.explanation import Explanation, Window
 from watcher.explanation import explain as lay_open
 from watcher.judging import Book
 from watcher.ledger.store import Ledger
+from watcher.records import Standing
 from watcher.replay import Replay
 from watcher.text import safe
 
@@ -43,12 +44,16 @@ def explain(
     """Lay a verdict open, from the ledger alone: counts, windows, shares, thresholds, enough to redo it by hand."""
     with assembly.open_ledger(settings.read(config), write=False) as ledger:
         book = _book(ledger, promise, version, number)
-    key = _key(book, part)
+        key = _key(book, part)
+        standings = ledger.standings(promise=promise, version=book.terms.version) if number is None else []
     found = lay_open(book, key)
     if as_json:
         print_json(_json(found, book, key))
     else:
         _print(found, book, key, every=every)
+        for standing in standings:
+            if (standing.column, standing.value) == key:
+                _print_diagnostics(standing, book)
 
 
 def _book(ledger: Ledger, promise: str, version: str | None, number: int | None) -> Book:
@@ -159,6 +164,12 @@ def _print(found: Explanation, book: Book, key: tuple[str, str], *, every: bool)
             style="dim",
         )
     )
+
+
+def _print_diagnostics(standing: Standing, book: Book) -> None:
+    """What is shown beside the verdict and had no influence on it."""
+    for line in wording.diagnostic_lines(standing, book.terms):
+        show.console().print(Text(line, style="dim"))
 
 
 def _notable(windows: tuple[Window, ...]) -> set[Window]:

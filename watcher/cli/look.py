@@ -42,7 +42,7 @@ def look(
 ) -> None:
     """Pull the labelled samples, judge, record, and say where every promise stands.
 
-    CONFIG is a TOML file. A data FILE (CSV or Parquet) with --tolerance is judged in memory with guessed columns, and
+    CONFIG is a TOML file. A CSV FILE with --tolerance is judged in memory with guessed columns, and
     nothing is kept.
     """
     if target.suffix.lower() == ".toml":

@@ -40,6 +40,8 @@ def promise(standings: Sequence[Standing], terms: Terms, unit: str) -> Renderabl
     parts += [Padding(Text(wording.sentence(s, terms, unit)), (0, 0, 0, 2)) for s in notable]
     flags = [Text("• " + line) for line in wording.flag_sentences(whole, terms)]
     parts += [Padding(flag, (0, 0, 0, 2)) for flag in flags]
+    shown = [Text(line, style="dim") for line in wording.diagnostic_lines(whole, terms)]
+    parts += [Padding(line, (0, 0, 0, 2)) for line in shown]
     parts.append(Padding(numbers(standings), (1, 0, 0, 2)))
     steps = [Text("→ " + step) for step in _steps(standings, terms)]
     parts += [Padding(step, (0, 0, 0, 2)) for step in steps]

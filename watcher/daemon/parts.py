@@ -2,14 +2,15 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import datetime
 
 from watcher import assembly
 from watcher.daemon.children import Children
 from watcher.daemon.pulls import ChildSource, Point
-from watcher.look import Routing, Watched
+from watcher.errors import SettingsError
+from watcher.look import Routing, Watched, refuse_weak_evidence
 from watcher.notices.base import RouteSpec, Sender
 from watcher.notices.routes import senders
 from watcher.settings import Settings, SourceTable
@@ -37,7 +38,7 @@ class Parts:
 
 
 def build(settings: Settings, children: Children, at_point: Point, clock: Callable[[], datetime]) -> Parts:
-    """Build the parts. Raises SettingsError for a secret that is missing."""
+    """Build the parts. Raises SettingsError for a secret that is missing, WeakEvidence for a promise it does not bear out."""
     watches = {
         table.name: Watch(
             table,
@@ -46,11 +47,20 @@ def build(settings: Settings, children: Children, at_point: Point, clock: Callab
         )
         for table in settings.source
     }
+    for watch in watches.values():
+        refuse_weak_evidence(watch.promises)
     routes = tuple(assembly.route_specs(settings))
     return Parts(
         settings=settings,
         watches=watches,
         routings=tuple(assembly.routings(settings)),
         routes=routes,
-        senders=senders(routes, clock),
+        senders=_senders(routes, clock),
     )
+
+
+def _senders(routes: Sequence[RouteSpec], clock: Callable[[], datetime]) -> Mapping[str, Sender]:
+    try:
+        return senders(routes, clock)
+    except ValueError as error:
+        raise SettingsError([str(error)]) from None

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from watcher.wording.cautions import CAUTIONS, budgets, method
-from watcher.wording.diagnostics import diagnostic_sentences
+from watcher.wording.diagnostics import diagnostic_lines, diagnostic_sentences
 from watcher.wording.events import event_sentence, event_step
 from watcher.wording.numbers import (
     about,
@@ -31,6 +31,7 @@ __all__ = [
     "budgets",
     "counted",
     "day",
+    "diagnostic_lines",
     "diagnostic_sentences",
     "duration",
     "event_sentence",

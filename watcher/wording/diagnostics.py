@@ -20,6 +20,16 @@ def diagnostic_sentences(standing: Standing, terms: Terms) -> tuple[str, ...]:
     return tuple(text for text in (*said, *rest) if text)
 
 
+def diagnostic_lines(standing: Standing, terms: Terms) -> tuple[str, ...]:
+    """The same in at most three lines: labels and their lag; what the unlabelled could change; how the labels behave."""
+    found = dict(standing.diagnostics)
+    lines = (
+        " ".join(text for tell in tellers if (text := tell(found, standing, terms)))
+        for tellers in ((_share, _age, _late), (_tipping,), (_bunched, _weight, _by_lag))
+    )
+    return tuple(line for line in lines if line)
+
+
 def _share(found: Mapping[str, Any], standing: Standing, terms: Terms) -> str:
     del standing, terms
     share, missing = found.get("labelled_share"), found.get("unlabelled")
@@ -70,6 +80,18 @@ def _weight(found: Mapping[str, Any], standing: Standing, terms: Terms) -> str:
     return "" if mean is None else f"The mean weight of the labelled samples is {float(mean):.3f}; planned is 1."
 
 
+def _by_lag(found: Mapping[str, Any], standing: Standing, terms: Terms) -> str:
+    del standing, terms
+    lag = found.get("error_by_lag")
+    if not lag or not (lag["early_labels"] and lag["late_labels"]):
+        return ""
+    early, late = percent(float(lag["early"])), percent(float(lag["late"]))
+    return (
+        f"Of the labels that came early {early} are errors ({counted(lag['early_labels'], 'label')}), of those that came late {late} "
+        f"({counted(lag['late_labels'], 'label')})."
+    )
+
+
 def _late(found: Mapping[str, Any], standing: Standing, terms: Terms) -> str:
     del found, terms
     late = standing.late_labels
@@ -83,6 +105,7 @@ _TOLD: Final[tuple[Callable[[Mapping[str, Any], Standing, Terms], str], ...]] = 
     _tipping,
     _bunched,
     _weight,
+    _by_lag,
 )
 _KNOWN: Final = frozenset(
     {
@@ -93,5 +116,6 @@ _KNOWN: Final = frozenset(
         "tipping_point_upper",
         "over_dispersion",
         "mean_weight",
+        "error_by_lag",
     }
 )
