@@ -21,7 +21,7 @@ from watcher.sources.base import SourceSpec, Survey
 from watcher.sources.header import missing
 from watcher.sources.statement import Held, Statement, Table, parts_of
 from watcher.sources.surveying import SAMPLE, survey_of
-from watcher.sources.tallying import answer, rejected_row
+from watcher.sources.tallying import answer, rejected_row, shared
 
 _CONNECT: Final = 10
 """Seconds to reach a server."""
@@ -85,7 +85,7 @@ class DatabaseSource:
         with self._session() as session:
             session.bound_rows()
             limit = self._spec.slice_limit
-            return [answer(session.statement(q), session.run, self.name, limit, None) for q in questions]
+            return shared(questions, lambda q: answer(session.statement(q), session.run, self.name, limit, None))
 
     def rejected(self, question: Question, reason: str, limit: int = 20) -> list[RejectedRow]:
         """Return at most `limit` of the rows that were rejected for `reason`."""

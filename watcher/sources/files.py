@@ -23,7 +23,7 @@ from watcher.sources.header import Header, positions, read_header
 from watcher.sources.lines import Lines, Malformed
 from watcher.sources.statement import Statement, Table, parts_of
 from watcher.sources.surveying import SAMPLE, survey_of
-from watcher.sources.tallying import answer, rejected_row
+from watcher.sources.tallying import answer, rejected_row, shared
 
 _T = TypeVar("_T")
 
@@ -79,7 +79,7 @@ class FileSource:
         """Answer all questions from one state of the files; a file that changes meanwhile is read again once."""
 
         def pull(files: Sequence[_File], engine: Duck) -> list[Tally]:
-            found = [self._answer(question, files, engine) for question in questions]
+            found = shared(questions, lambda question: self._answer(question, files, engine))
             self._pulled()
             return found
 

@@ -17,7 +17,7 @@ from watcher.sources.database import equip
 from watcher.sources.header import missing
 from watcher.sources.statement import Statement, Table, parts_of
 from watcher.sources.surveying import SAMPLE, survey_of
-from watcher.sources.tallying import answer, rejected_row
+from watcher.sources.tallying import answer, rejected_row, shared
 
 
 class MemorySource:
@@ -61,7 +61,7 @@ class MemorySource:
 
     def tally(self, questions: Sequence[Question]) -> list[Tally]:
         """Answer all questions."""
-        return [answer(self._statement(q), self._run, self._name, self._limit, None) for q in questions]
+        return shared(questions, lambda q: answer(self._statement(q), self._run, self._name, self._limit, None))
 
     def rejected(self, question: Question, reason: str, limit: int = 20) -> list[RejectedRow]:
         """Return at most `limit` of the rows that were rejected for `reason`."""

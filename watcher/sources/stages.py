@@ -165,7 +165,8 @@ class Stages:
         return self._stage("plain_id", sa.select(sa.func.nullif(dialects.Plain(trimmed.c.id), "").label("id")))
 
     def _stage(self, name: str, select: sa.Select[Any] | sa.CompoundSelect[Any]) -> sa.CTE:
-        return select.cte(self.prefix + name)
+        # SQLite would flatten the stages and call its functions again for every mention of a column.
+        return select.cte(self.prefix + name).prefix_with("MATERIALIZED", dialect="sqlite")
 
     def _timed(self, exact: sa.CTE) -> sa.CTE:
         """Turn the columns of time into seconds since 1970; NULL where they cannot be read or are not believed."""

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import sqlalchemy as sa
@@ -89,6 +89,16 @@ class TooManyValues(Exception):
     def __init__(self, column: str) -> None:
         self.column = column
         super().__init__(column)
+
+
+def shared(questions: Sequence[Question], one: Callable[[Question], Tally]) -> list[Tally]:
+    """Answer every question, those of promises that ask the same thing with one statement."""
+    found: dict[Question, Tally] = {}
+    for q in questions:
+        same = replace(q, promise="", version="")
+        if same not in found:
+            found[same] = one(q)
+    return [replace(found[replace(q, promise="", version="")], promise=q.promise, version=q.version) for q in questions]
 
 
 def answer(statement: Statement, run: Run, source: str, slice_limit: int, sample: int | None) -> Tally:
