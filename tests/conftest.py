@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+import shutil
 from collections.abc import Callable
 
 import pytest
@@ -11,7 +12,23 @@ from peers.postgresql import postgresql, postgresql_server
 
 __all__ = ["postgresql", "postgresql_server"]
 
-MISSING: dict[str, Callable[[], str | None]] = {"postgresql": _postgresql.missing}
+
+def _program(name: str, package: str) -> Callable[[], str | None]:
+    def missing() -> str | None:
+        return None if shutil.which(name) else f"{name} is not there (Debian's package {package})"
+
+    return missing
+
+
+MISSING: dict[str, Callable[[], str | None]] = {
+    "postgresql": _postgresql.missing,
+    "prometheus": _program("prometheus", "prometheus"),
+    "alertmanager": _program("prometheus-alertmanager", "prometheus-alertmanager"),
+    "chromium": _program("chromium", "chromium"),
+    "poppler": _program("pdftoppm", "poppler-utils"),
+    "systemd": _program("systemd-analyze", "systemd"),
+    "buildah": _program("buildah", "buildah"),
+}
 """Name of a peer -> what is missing to start it, or None."""
 
 _left_out: dict[str, list[str]] = {}
