@@ -91,8 +91,9 @@ def _clusters(n_max: int, levels: Levels) -> tuple[int, ...]:
     pairs = Clustered(n_max).pairs
     table = dict.fromkeys(pairs, 0)
     for level, counts in levels.items():
-        if level:
-            n, _, k = level.partition(":")
+        n, _, k = level.partition(":")
+        # A cluster without a single label ("0:0") is predictions alone: it tells nothing.
+        if level and int(n):
             table[int(n), int(k)] += counts.clusters
     return tuple(table[pair] for pair in pairs)
 
