@@ -5,16 +5,19 @@ from __future__ import annotations
 import json
 import math
 import xml.etree.ElementTree as ET
+from datetime import timedelta
 from pathlib import Path
 from typing import Any
 
 import pytest
 from click.testing import CliRunner, Result
-from look.rows import configuration, write, year
+from look.rows import RELEASED, configuration, write, year
 
+from watcher import settings
 from watcher.bounds.exact import operating_characteristics
 from watcher.bounds.lead_time import weeks_until
 from watcher.bounds.planning import WEEK, smallest_rise, widest_bucket
+from watcher.checking import Finding, check
 from watcher.cli import main
 from watcher.report.plan_chart import DelayBar, plan_chart
 
@@ -192,3 +195,38 @@ def test_what_follows_from_the_promise_is_not_given_beside_it(folder: Path) -> N
     assert "--tolerance" in _run(path, "triage", "--tolerance", "0.03").stderr
     assert "triage" in _run(path, "nobody").stderr
     assert "site=a" in _run(path, "triage", "--slice", "site=z").stderr
+
+
+def _checked(folder: Path, rows: list[tuple[str, ...]], days: int, text: str) -> list[Finding]:
+    """What `check` finds when the last bucket of the rows is due; corrections, which turn right into wrong, are left out."""
+    write(folder / "rows.csv", [row for row in rows if row[1] != "2"])
+    (folder / "watcher.toml").write_text(text, encoding="utf-8")
+    now = RELEASED + timedelta(days=days + 5)
+    return check(settings.read(folder / "watcher.toml"), int(now.timestamp()))
+
+
+def test_check_says_that_a_promise_cannot_be_decided_in_its_life(tmp_path: Path) -> None:
+    """A rate just below the tolerance and few labels: neither supported nor refuted, with the smallest rise; a good one is not."""
+    near = _checked(tmp_path, year(3, 20, 30, late=False, rate=0.028), 20, configuration())
+    (told,) = [f.text for f in near if "neither supported nor refuted" in f.text]
+
+    assert [f.level for f in near if f.text == told] == ["warning"]
+    assert "What a whole life can notice is" in told
+    (fact,) = [f.text for f in near if "smallest rise over the tolerance" in f.text]
+    assert "site = c" in fact
+    good = _checked(tmp_path, year(3, 20, 120, late=False, rate=0.004), 20, configuration())
+    assert not any("neither" in f.text for f in good)
+
+
+def test_check_names_the_bucket_that_would_do(tmp_path: Path) -> None:
+    """200 labels a day are more than a tenth of what a doubled rate needs; the bucket named is the widest that fits."""
+    rows = year(3, 12, 220, late=False, rate=0.01)
+    found = _checked(tmp_path, rows, 12, configuration())
+    (told,) = [f.text for f in found if "would do" in f.text]
+    labels = len({row[0] for row in rows if row[6]}) / 12 * 7
+    hours = widest_bucket(0.03, 0.005, labels)
+
+    assert hours is not None
+    assert f'bucket = "{hours // 3600}h" would do' in told
+    narrow = _checked(tmp_path, rows, 12, configuration(extra=f'bucket = "{hours // 3600}h"'))
+    assert not any("would do" in f.text for f in narrow)

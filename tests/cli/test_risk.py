@@ -121,3 +121,16 @@ def test_without_slices_the_whole_has_everything(tmp_path: Path) -> None:
 def test_what_is_unknown_or_impossible_is_refused(looked: Path, arguments: tuple[str, ...]) -> None:
     """Exit 2."""
     assert _run("risk", looked, *arguments).exit_code == 2
+
+
+@pytest.mark.parametrize("command", [("status",), ("explain", "triage"), ("look", "--at", "2026-02-12")])
+def test_diagnostics_stand_beside_the_verdict(looked: Path, command: tuple[str, ...]) -> None:
+    """Labelled share and age of the newest label, tipping point and over-dispersion as plain sentences, for the whole."""
+    name, *rest = command
+    printed = " ".join(_run(name, looked, *rest).output.split())
+    whole = json.loads(_run("status", looked, "--json").stdout)["promises"][0]["diagnostics"]
+
+    assert f"{100 * whole['labelled_share']:.1f}% of the predictions in the evidence are labelled" in printed
+    assert "before the look." in printed
+    assert "unlabelled" in printed
+    assert f"Errors a bucket vary {whole['over_dispersion']:.2f} times as much" in printed

@@ -589,3 +589,14 @@ def test_a_loss_is_not_borne_out_by_counted_errors(tmp_path: Path) -> None:
                 ledger, _write(tmp_path, case, evidence="release_evidence = { labels = 6000, errors = 1 }"), DAYS + LAG
             )
         assert "uncertified" in _look(ledger, _write(tmp_path, case, evidence=""), DAYS + LAG).standings[0].flags
+
+
+@pytest.mark.parametrize(("second", "sealed"), [(-1, 9), (0, 10)])
+def test_a_bucket_is_sealed_the_second_its_label_lag_is_over(tmp_path: Path, second: int, sealed: int) -> None:
+    """At end + label_lag and not before (the ledger's own rule: at or after); counted by hand."""
+    case = Case("plain", "", "", _some(5, 0.02), byhand.uniform, _plain, _counted)
+    with Ledger.memory() as ledger:
+        whole = _look(ledger, _write(tmp_path, case), 10 + LAG + second / DAY).standings[0]
+
+    assert whole.labels == sum(1 for row in case.rows if row["label"] and _day(row) < sealed)
+    assert whole.counted_until == RELEASED + timedelta(days=sealed)
