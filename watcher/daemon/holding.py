@@ -2,13 +2,16 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from contextlib import ExitStack
+import threading
+from collections.abc import Callable, Iterator
+from contextlib import ExitStack, contextmanager
 from dataclasses import dataclass
 
-from watcher.assembly import open_ledger
+from sqlalchemy import Connection, Engine
+
 from watcher.daemon.parts import Parts
 from watcher.errors import UsageError
+from watcher.ledger.lock import FileLock
 from watcher.ledger.store import Ledger
 from watcher.look import recognise
 from watcher.settings import Settings
@@ -26,10 +29,26 @@ class Held:
         self._stack.close()
 
 
+class QueuedLedger(Ledger):
+    """A ledger that several threads of this process write: they queue here, in order and as long as it takes, and not in the
+    database, which gives up after five seconds.
+    """
+
+    def __init__(self, engine: Engine, ledger_id: str, *, lock: FileLock | None, write: bool) -> None:
+        self._queue = threading.Lock()
+        super().__init__(engine, ledger_id, lock=lock, write=write)
+
+    @contextmanager
+    def writing(self) -> Iterator[Connection]:
+        """One transaction, after those of the other threads."""
+        with self._queue, super().writing() as connection:
+            yield connection
+
+
 def hold(settings: Settings, at_point: Callable[[str], None]) -> Held:
     """Open the ledger and become its writer. Raises SchemaMismatch, LedgerBusy while another writes, WatcherError."""
     with ExitStack() as stack:
-        ledger = stack.enter_context(open_ledger(settings, write=True))
+        ledger = stack.enter_context(QueuedLedger.open(settings.ledger_url()))
         ledger.at_point = at_point
         stack.enter_context(ledger.writer())
         return Held(ledger, stack.pop_all())

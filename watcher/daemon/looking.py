@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import os
-import threading
 from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any, Final
@@ -14,6 +13,7 @@ from watcher.daemon.children import Cancelled
 from watcher.daemon.hooks import Hooks
 from watcher.daemon.parts import Watch
 from watcher.daemon.stepback import record_step_back
+from watcher.daemon.turns import Turns
 from watcher.errors import LedgerBusy, SourceFailed, WatcherError
 from watcher.ledger.store import Ledger
 from watcher.look import ClockWentBack, Outcome, Routing, attempt, quiet_until
@@ -21,10 +21,10 @@ from watcher.text import safe
 
 FIRST_RETRY: Final = 30.0
 LONGEST: Final = 600.0
-AT_ONCE: Final = max(2, os.cpu_count() or 2)
-"""Looks under way at a time, so that a start with many sources does not ask for the memory of them all."""
-PATIENCE: Final = 10.0
-"""Seconds for which a look waits for its turn; then it begins all the same: sources that hang must not hold up the others."""
+AT_ONCE: Final = max(4, os.cpu_count() or 4)
+"""Looks under way at a time."""
+PATIENCE: Final = 30.0
+"""Seconds after which a look that is still under way leaves its place to another."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -53,7 +53,7 @@ class Looker:
         self._log = log
         self._quiet: dict[str, _Quiet] = {}
         self._failures: dict[str, int] = {}
-        self._turns = threading.BoundedSemaphore(AT_ONCE)
+        self._turns = Turns(AT_ONCE, PATIENCE)
         self.tried: set[str] = set()
         """Sources that were looked at, with or without success, since the daemon started."""
 
@@ -65,9 +65,9 @@ class Looker:
         """One look. Raises Cancelled when the daemon stops; nothing else."""
         structlog.contextvars.clear_contextvars()
         structlog.contextvars.bind_contextvars(source=watch.source.name)
-        turn = self._turns.acquire(timeout=PATIENCE)
         try:
-            return self._look(ledger, watch, routings)
+            with self._turns.turn():
+                return self._look(ledger, watch, routings)
         except Cancelled:
             raise
         except ClockWentBack as error:
@@ -82,8 +82,6 @@ class Looker:
             self._log.exception("the look failed unexpectedly; the counts stay")
         finally:
             self.tried.add(watch.source.name)
-            if turn:
-                self._turns.release()
         return Looked()
 
     def _look(self, ledger: Ledger, watch: Watch, routings: Sequence[Routing]) -> Looked:
@@ -150,7 +148,7 @@ class Looker:
             )
         for failure in outcome.failed:
             self._log.warning("source gave no answer", reason=failure.reason, detail=safe(failure.detail, 500))
-        if outcome.written:
+        if outcome.written and not outcome.failed:
             self._log.info("look recorded", promises=len({(s.promise, s.version) for s in outcome.standings}))
 
 

@@ -178,8 +178,9 @@ class Service:
 
     async def _finish(self) -> None:
         """Let what is under way come to its end: a pull is killed if the daemon stops, a commit is finished."""
-        if self._busy:
-            _, late = await asyncio.wait(set(self._busy), timeout=STOPPING)
+        busy, self._busy = self._busy, set()
+        if busy:
+            _, late = await asyncio.wait(busy, timeout=STOPPING)
             if late:
                 self._log.warning(
                     "work under way is left behind; what it had not recorded is done again", jobs=len(late)
