@@ -24,6 +24,7 @@ from watcher import assembly, settings
 from watcher.checking import check
 from watcher.daemon.children import Children
 from watcher.daemon.parts import build
+from watcher.errors import SettingsError
 from watcher.ledger import keys
 from watcher.ledger.audit import audit
 from watcher.ledger.store import Ledger
@@ -600,3 +601,34 @@ def test_a_bucket_is_sealed_the_second_its_label_lag_is_over(tmp_path: Path, sec
 
     assert whole.labels == sum(1 for row in case.rows if row["label"] and _day(row) < sealed)
     assert whole.counted_until == RELEASED + timedelta(days=sealed)
+
+
+def test_arriving_labels_are_errors_or_none(tmp_path: Path) -> None:
+    """A loss cannot arrive step by step: refused with the way out; miss and label noise can, and audit follows."""
+    lossy = _lossy(3, 0.1)
+    lossy.promise += '\ncount = "arriving"'
+    with pytest.raises(SettingsError, match='use count = "sealed"'):
+        settings.read(_write(tmp_path, lossy))
+    for case in (_sided(3, 0.1, "miss", "yes"), _noisy(3, 0.1)):
+        case.promise += '\ncount = "arriving"'
+        with Ledger.memory() as ledger:
+            done = [_look(ledger, _write(tmp_path, case), day) for day in (5, 13, DAYS + LAG)][-1]
+            assert audit(ledger, replay=Replay()).findings == ()
+        for standing in done.standings:
+            windows = _windows(case, standing.value)
+            assert standing.total == pytest.approx(windows.total(DAYS - 1, case.above), abs=2e-6)
+
+
+@pytest.mark.parametrize("made", [_weighted, _horvitz])
+@pytest.mark.parametrize("measure", ["miss", "false-alarm"])
+def test_a_rate_among_positives_is_not_read_off_an_uneven_sample(tmp_path: Path, made: Any, measure: str) -> None:
+    """Refused: with half of the labels from predicted negatives the weighted misses per labelled positive are no miss rate.
+
+    Computed: 20% predicted positive, of them 90% positive, of the others 1%: miss rate .008/.188 = .043; sampled half and
+    half (weights .4 and 1.6) the weighted misses per labelled positive are 1.6*.005/.455 = .018.
+    """
+    case = made(3, 0.01)
+    case.promise += f'\nmeasure = "{measure}"\npositive = "yes"'
+
+    with pytest.raises(SettingsError, match=f"measure = '{measure}' does not go with"):
+        settings.read(_write(tmp_path, case))

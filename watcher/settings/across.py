@@ -59,6 +59,15 @@ def _against(promise: PromiseTable, columns: ColumnsTable) -> list[str]:
         found.append(
             f'count = "arriving" does not go with {designs[0]}: such samples count when their bucket is sealed; use count = "sealed"'
         )
+    if promise.measure in ("miss", "false-alarm") and designs and designs[0] != "n_max":
+        found.append(
+            f"measure = {promise.measure!r} does not go with {designs[0]}: an uneven sample has another share of positives than the "
+            'predictions have, so errors among its positives are no rate of production; label evenly, or use measure = "error"'
+        )
+    if promise.count == "arriving" and promise.measure == "loss":
+        found.append(
+            'count = "arriving" does not go with measure = \'loss\': its steps are whole errors; use count = "sealed"'
+        )
     if designs and promise.measure == "loss":
         found.append(f"measure = 'loss' does not go with {designs[0]}")
     return found

@@ -49,7 +49,7 @@ class PromiseTable(Table):
     count: Counting = "sealed"
     slices: dict[str, tuple[Text, ...] | dict[str, Level]] = Field(default_factory=dict)
     weight_levels: tuple[Level, ...] = ()
-    n_max: Annotated[int, Field(ge=1, le=1000)] | None = None
+    n_max: Annotated[int, Field(ge=1, le=200)] | None = None
     cluster_span: Duration | None = None
     labelling_probabilities: tuple[Level, ...] = ()
     label_noise: tuple[float, float] | None = None
