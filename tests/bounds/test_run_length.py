@@ -100,7 +100,7 @@ def test_a_restless_sum_starts_the_calm_again() -> None:
 
     assert sums.max() < 1095
     assert restless.size > 0
-    assert events == ((0, "warning"), (int(restless[-1]) + 1 + CALM // DAY, "warning-over"))
+    assert events == ((0, "warning"), (int(restless[-1]) + CALM // DAY, "warning-over"))
 
 
 def test_a_further_crossing_makes_no_event() -> None:

@@ -30,7 +30,7 @@ class Warning:  # noqa: A001  the product's own word; nobody imports it bare
     """Index of the first bucket whose windows count: those before were dropped when a warning was raised."""
     standing: bool = False
     calm_since: int = -1
-    """While standing: end (epoch seconds) of the bucket since which the fresh sum is below sqrt(A); -1 while it is not."""
+    """While standing: end (epoch seconds) of the newest bucket after which the fresh sum was not below sqrt(A); else -1."""
 
 
 def warning_sums(buckets: ArrayLike, rate: float, *, design: Design = UNIFORM) -> Floats:
@@ -115,8 +115,7 @@ def _step(state: Warning, total: float, t: int, end: int, log_A: float) -> tuple
     if not state.standing:
         return state, None
     if total >= 0.5 * log_A:
-        return Warning(state.reset, standing=True), None
-    calm_since = end if state.calm_since < 0 else state.calm_since
-    if end - calm_since >= CALM:
+        return Warning(state.reset, standing=True, calm_since=end), None
+    if end - state.calm_since >= CALM:
         return Warning(state.reset), "warning-over"
-    return Warning(state.reset, standing=True, calm_since=calm_since), None
+    return state, None
