@@ -286,3 +286,14 @@ def test_every_command_has_help_and_is_in_the_readme_or_docs() -> None:
         assert _run(name, "--help").exit_code == 0
         assert f"watcher {name}" in text, name
     assert "Did you mean 'status'" in _run("statsu").stderr
+
+
+def test_dry_run_needs_no_ledger(tmp_path: Path) -> None:
+    """Before the first look it judges in memory and leaves nothing behind."""
+    write(tmp_path / "rows.csv", year(1, 3, 20, late=False))
+    path = tmp_path / "watcher.toml"
+    path.write_text(configuration(), encoding="utf-8")
+    found = _json("look", path, "--at", "2026-01-20", "--dry-run")
+
+    assert found["promises"][0]["labels"] > 0
+    assert sorted(p.name for p in tmp_path.iterdir()) == ["rows.csv", "watcher.toml"]

@@ -20,7 +20,7 @@ from notices.memory import (
     some_standing,
 )
 
-from watcher.notices.base import LogTarget, Message, RouteSpec
+from watcher.notices.base import Attachment, LogTarget, MailTarget, Message, RouteSpec
 from watcher.notices.bundle import counts_csv
 from watcher.notices.envelope import body
 from watcher.notices.message import Writer
@@ -221,3 +221,16 @@ def test_the_noun_of_the_configuration_is_used() -> None:
     (item,) = writer(DESK, "id", list(memory.waiting("desk"))).items
 
     assert "damage-photos-1-parcel" in item.now
+
+
+def test_mail_carries_the_report_that_its_notice_announces() -> None:
+    """The other routes say where it is; a heartbeat carries nothing."""
+    page = Attachment("2026-W48.html", "text/html", "<html></html>")
+    mail = RouteSpec("m", MailTarget("h", 25, "a@b", ("c@d",), security="none"))
+    for route, kind, expected in ((mail, "report", (page,)), (DESK, "report", ()), (mail, "heartbeat", ())):
+        memory = Memory()
+        memory.periodic(route.name, kind, 7, T0, "damage-photos", "1")
+        memory.known_standings["damage-photos", "1"] = [some_standing()]
+        writer = Writer(memory, lambda promise, _: promise, report=lambda _notice: (page,))
+
+        assert writer(route, "id", list(memory.waiting(route.name))).attachments == expected

@@ -16,7 +16,7 @@ from watcher.cli import show
 from watcher.cli.common import JSON, Moment, any_breach, clock, print_json
 from watcher.cli.main import EXIT_BREACH, EXIT_FAILURE, EXIT_OK
 from watcher.drafting import Guess, configuration, guess
-from watcher.errors import UsageError
+from watcher.errors import SchemaMismatch, UsageError
 from watcher.ledger.store import Ledger
 from watcher.look import ClockWentBack, Outcome, attempt
 
@@ -67,7 +67,7 @@ def _configured(
     config, now = settings.read(path), at or clock()
     if at is not None and at > clock() and not dry_run:
         raise UsageError(f"--at {at.isoformat()} lies after this machine's clock: only with --dry-run")
-    ledger = assembly.open_ledger(config, write=not dry_run)
+    ledger = _dry_ledger(config) if dry_run else assembly.open_ledger(config, write=True)
     try:
         with contextlib.nullcontext() if dry_run else ledger.writer():
             outcomes = [
@@ -78,6 +78,16 @@ def _configured(
             raise UsageError(f"--at: {error}") from None
         raise
     return outcomes, ledger, assembly.units(config)
+
+
+def _dry_ledger(config: settings.Settings) -> Ledger:
+    """The ledger to read beside whoever writes it; before the first look an empty one in memory."""
+    try:
+        return assembly.open_ledger(config, write=False)
+    except UsageError as error:
+        if "ledger" not in str(error) or isinstance(error, SchemaMismatch):
+            raise
+        return Ledger.memory()
 
 
 def _one(

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from typing import Any
+from typing import Any, Final
 from urllib.parse import quote
 
 import structlog
@@ -14,7 +14,7 @@ from watcher.daemon.parts import Parts
 from watcher.errors import WatcherError
 from watcher.ledger.keys import message_key, period_key
 from watcher.ledger.store import Ledger
-from watcher.notices.base import Message, RouteSpec
+from watcher.notices.base import Attachment, Message, RouteSpec
 from watcher.notices.booked import Booked
 from watcher.notices.due import Due, OpenBreach, due_now, notice_of
 from watcher.notices.message import Writer
@@ -42,7 +42,10 @@ class Poster:
         names = units(parts.settings)
         booked = Booked(ledger, message_key)
         write = Writer(
-            booked, _link(parts, self._address()), lambda promise, version: names.get((promise, version), "sample")
+            booked,
+            _link(parts, self._address()),
+            lambda promise, version: names.get((promise, version), "sample"),
+            lambda notice: _report(ledger, notice),
         )
 
         def pointed(to: RouteSpec, message_id: str, notices: Sequence[Notice]) -> Message:
@@ -152,3 +155,22 @@ def _link(parts: Parts, address: str) -> Callable[[str, str], str]:
         return f"{base}/promises/{quote(promise, safe='')}/{quote(version, safe='')}"
 
     return link
+
+
+MEDIA: Final = {".html": "text/html", ".csv": "text/csv"}
+"""What a mail carries of a report: the page and its figures."""
+
+
+def _report(ledger: Ledger, notice: Notice) -> tuple[Attachment, ...]:
+    """The newest report that was archived by the time of the notice."""
+    listed = [stored for stored in ledger.reports.listed() if stored.created <= notice.created]
+    if not listed:
+        return ()
+    newest = (listed[0].week, listed[0].revision)
+    found = []
+    for stored in listed:
+        media = MEDIA.get(stored.name[stored.name.rfind(".") :])
+        if media is not None and (stored.week, stored.revision) == newest:
+            content = ledger.reports.content(stored.week, stored.revision, stored.name)
+            found.append(Attachment(stored.name, media, (content or b"").decode("utf-8")))
+    return tuple(found)

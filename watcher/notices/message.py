@@ -9,7 +9,7 @@ from urllib.parse import quote
 
 from watcher.answer import standing_json
 from watcher.notices import sentences
-from watcher.notices.base import PERIODIC, Archive, Attachment, Item, Message, RouteSpec
+from watcher.notices.base import PERIODIC, Archive, Attachment, Item, MailTarget, Message, RouteSpec
 from watcher.notices.bundle import bundle
 from watcher.records import Notice, Standing, Terms
 from watcher.text import safe
@@ -29,6 +29,8 @@ class Writer:
     link: Link
     unit: Callable[[str, str], str] = lambda _promise, _version: "sample"
     """(promise, version) -> the noun of the configuration."""
+    report: Callable[[Notice], tuple[Attachment, ...]] = lambda _notice: ()
+    """The files of the report that a notice announces; mail carries them, other routes say where they are."""
 
     def __call__(self, route: RouteSpec, message_id: str, notices: Sequence[Notice]) -> Message:
         """The message of these notices, all of one look and route."""
@@ -99,6 +101,8 @@ class Writer:
         return self.archive.terms(notice.promise, notice.version) if notice.promise else None
 
     def _evidence(self, route: RouteSpec, notice: Notice) -> tuple[Attachment, ...]:
+        if notice.kind == "report" and isinstance(route.target, MailTarget):
+            return self.report(notice)
         if not route.retrain:
             return ()
         archive, promise, version = self.archive, notice.promise, notice.version

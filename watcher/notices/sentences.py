@@ -47,5 +47,5 @@ def periodic(notice: Notice, terms: Terms | None, standing: Standing | None) -> 
             since = f"; it was noticed on {moment(standing.breach.noticed, terms.time_zone)}"
         return f"{about}: breach {notice.breach_number} has not been acknowledged{since}.", step
     if notice.kind == "report":
-        return f"{about}: the weekly report is due.", step
+        return f"{about}: a new weekly report is there.", step
     return f"The daemon is alive; the newest look it had recorded by then is number {notice.look}.", step
