@@ -99,7 +99,9 @@ def test_a_breach_after_a_withdrawn_one_has_a_new_number() -> None:
     """So that retraining starts again for it."""
     wrong = [(day + 1.0, dict.fromkeys(range(day + 1), (60, 12))) for day in range(6)]
     mended = [(7.0, dict.fromkeys(range(7), (60, 0)))]
-    again = [(8.0 + i, {**dict.fromkeys(range(7), (60, 0)), **{7 + d: (60, 30) for d in range(i + 1)}}) for i in range(3)]
+    again = [
+        (8.0 + i, {**dict.fromkeys(range(7), (60, 0)), **{7 + d: (60, 30) for d in range(i + 1)}}) for i in range(3)
+    ]
     standing, events = run(ARRIVING, wrong + mended + again)
 
     numbers = [event.facts["number"] for event in events if event.kind == "breach"]

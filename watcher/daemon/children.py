@@ -21,7 +21,7 @@ T = TypeVar("T")
 FORKS: Final[ForkServerContext] = multiprocessing.get_context("forkserver")
 """A small process that has imported what pulls need and forks: a pull starts in some milliseconds of processor time, and
 no thread of the daemon is ever forked."""
-PRELOADED: Final = ("watcher.daemon.pulls", "watcher.sources.files", "watcher.sources.database")
+PRELOADED: Final = ("click", "watcher.daemon.pulls", "watcher.sources.files", "watcher.sources.database")
 OURS: Final = (signal.SIGINT, signal.SIGTERM)
 """Ctrl-C and a service manager reach the whole group: the daemon alone decides, its children are killed by it."""
 
