@@ -11,9 +11,12 @@ from sqlalchemy import Connection, Engine
 
 from watcher.daemon.parts import Parts
 from watcher.errors import UsageError
+from watcher.ledger import read
 from watcher.ledger.lock import FileLock
+from watcher.ledger.rows import find_term
 from watcher.ledger.store import Ledger
 from watcher.look import recognise
+from watcher.records import Standing
 from watcher.settings import Settings
 
 
@@ -43,6 +46,17 @@ class QueuedLedger(Ledger):
         """One transaction, after those of the other threads."""
         with self._queue, super().writing() as connection:
             yield connection
+
+    def standings(
+        self, *, promise: str | None = None, version: str | None = None, open_only: bool = False
+    ) -> list[Standing]:
+        """As `Ledger.standings`; of one version without reading the terms of all, of which a look would do so for each."""
+        if promise is None or version is None:
+            return super().standings(promise=promise, version=version, open_only=open_only)
+        with self.reading() as connection:
+            found = find_term(connection, promise, version)
+            wanted = found is not None and (found.closed_by is None or not open_only)
+            return read.standings(connection, [found]) if found is not None and wanted else []
 
 
 def hold(settings: Settings, at_point: Callable[[str], None]) -> Held:

@@ -57,9 +57,9 @@ class Looker:
         self.tried: set[str] = set()
         """Sources that were looked at, with or without success, since the daemon started."""
 
-    def forget(self) -> None:
-        """After a reload nothing is taken for unchanged."""
-        self._quiet.clear()
+    def forget(self, source: str) -> None:
+        """After a change of its configuration a source's files are not taken for unchanged."""
+        self._quiet.pop(source, None)
 
     def look(self, ledger: Ledger, watch: Watch, routings: Sequence[Routing]) -> Looked:
         """One look. Raises Cancelled when the daemon stops; nothing else."""

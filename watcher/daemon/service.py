@@ -311,7 +311,10 @@ class Service:
             self._log.error("the new configuration was refused; the old one goes on", detail=str(error))
             return
         old, self._parts = self._parts, parts
-        self._looker.forget()
+        for name, watch in parts.watches.items():
+            before = old.watches.get(name)
+            if before is None or (before.table, before.promises) != (watch.table, watch.promises):
+                self._looker.forget(name)
         if self._scheduler is not None:
             self._schedule_looks()
         if old.settings.web != parts.settings.web or old.settings.ledger != parts.settings.ledger:
