@@ -150,3 +150,11 @@ def test_every_key_is_documented() -> None:
     }
 
     assert keys <= named | {"environment"}, keys - named
+
+
+def test_the_configuration_of_the_readme_is_one() -> None:
+    """The lines that a newcomer copies."""
+    text = (Path(__file__).parents[2] / "README.md").read_text(encoding="utf-8")
+    (block,) = re.findall(r"```toml\n(.*?)```", text, re.DOTALL)
+
+    assert _read(block).promise[0].name == "damage-photos"
