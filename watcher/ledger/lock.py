@@ -51,6 +51,8 @@ class FileLock:
     def release(self) -> None:
         """Give the lock back; the file stays, for removing it would race with the next holder."""
         if self._descriptor is not None:
+            # Said outright: closing would leave the lock with a child that was forked a moment ago and still has its copy.
+            fcntl.flock(self._descriptor, fcntl.LOCK_UN)
             os.close(self._descriptor)
             self._descriptor = None
 
