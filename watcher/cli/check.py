@@ -7,7 +7,7 @@ from pathlib import Path
 import click
 from rich.text import Text
 
-from watcher import settings
+from watcher import settings, wording
 from watcher.checking import check as examine
 from watcher.cli import show
 from watcher.cli.common import CONFIG, JSON, clock, print_json
@@ -31,5 +31,5 @@ def check(ctx: click.Context, config: Path, as_json: bool) -> None:
         for finding in findings:
             word, style = SIGNS[finding.level]
             out.print(Text(f"{word}  {finding.about}: {finding.text}", style=style))
-        out.print(Text(f"{len(problems)} problems." if problems else "Ready for the first look."))
+        out.print(Text(f"{wording.counted(len(problems), 'problem')}." if problems else "Ready for the first look."))
     ctx.exit(EXIT_USAGE if problems else EXIT_OK)
