@@ -6,7 +6,7 @@ from collections.abc import Iterable, Mapping, Sequence
 from datetime import UTC, datetime
 from typing import Any
 
-from watcher.records import Breach, Event, Failure, Head, Recent, Standing, StoredEvent, Support
+from watcher.records import Breach, Event, Failure, Head, Notice, Recent, Standing, StoredEvent, Support
 
 
 def rfc3339(moment: datetime | None) -> str | None:
@@ -86,6 +86,25 @@ def event_json(stored: StoredEvent) -> dict[str, Any]:
         "bucket": None if event.bucket is None else rfc3339(datetime.fromtimestamp(event.bucket, UTC)),
         "facts": dict(event.facts),
         "acknowledged_by": stored.acknowledged_by,
+    }
+
+
+def notice_json(notice: Notice) -> dict[str, Any]:
+    """One row of the outbox."""
+    return {
+        "key": notice.key,
+        "route": notice.route,
+        "kind": notice.kind,
+        "promise": notice.promise,
+        "version": notice.version,
+        "breach": notice.breach_number,
+        "look": notice.look,
+        "event": notice.event,
+        "state": notice.state,
+        "tries": notice.tries,
+        "next": rfc3339(notice.next_at) if notice.state == "waiting" else None,
+        "created": rfc3339(notice.created),
+        "answer": notice.answer,
     }
 
 

@@ -11,7 +11,7 @@ from fractions import Fraction
 from pathlib import Path
 from typing import Final
 
-from watcher.answer import rfc3339, standing_json
+from watcher.answer import notice_json, rfc3339, standing_json
 from watcher.errors import LedgerBusy, WatcherError
 from watcher.ledger.store import Ledger
 from watcher.ledger.terms import canonical_terms
@@ -184,22 +184,7 @@ def _events(ledger: Ledger) -> Iterator[Row]:
 
 
 def _notices(ledger: Ledger) -> Iterator[Row]:
-    for notice in reversed(ledger.notices(limit=_MANY)):
-        yield {
-            "key": notice.key,
-            "route": notice.route,
-            "kind": notice.kind,
-            "promise": notice.promise,
-            "version": notice.version,
-            "breach": notice.breach_number,
-            "look": notice.look,
-            "event": notice.event,
-            "state": notice.state,
-            "tries": notice.tries,
-            "next": rfc3339(notice.next_at) if notice.state == "waiting" else None,
-            "created": rfc3339(notice.created),
-            "answer": notice.answer,
-        }
+    yield from map(notice_json, reversed(ledger.notices(limit=_MANY)))
 
 
 _NAMES: Final = ("promise", "version")

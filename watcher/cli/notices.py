@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from dataclasses import replace
 from pathlib import Path
-from typing import Any, Final
+from typing import Final
 
 import click
 from rich import box
@@ -12,7 +12,7 @@ from rich.table import Table
 from rich.text import Text
 
 from watcher import settings
-from watcher.answer import rfc3339
+from watcher.answer import notice_json
 from watcher.cli import show
 from watcher.cli.common import CONFIG, JSON, clock, print_json
 from watcher.errors import UsageError
@@ -70,7 +70,7 @@ def notices(
             )
             found = [changed]
     if as_json:
-        print_json([_json(notice) for notice in found])
+        print_json([notice_json(notice) for notice in found])
     else:
         _print(found)
 
@@ -97,24 +97,6 @@ def _given_up(notice: Notice) -> Notice:
         raise UsageError(f"notice {notice.key[:SHOWN]}: is {notice.state}; only a waiting one can be given up")
     before = f"; before that: {notice.answer}" if notice.answer else ""
     return replace(notice, state="dead", answer=BY_HAND + before)
-
-
-def _json(notice: Notice) -> dict[str, Any]:
-    return {
-        "key": notice.key,
-        "route": notice.route,
-        "kind": notice.kind,
-        "promise": notice.promise,
-        "version": notice.version,
-        "breach": notice.breach_number,
-        "look": notice.look,
-        "event": notice.event,
-        "state": notice.state,
-        "tries": notice.tries,
-        "next": rfc3339(notice.next_at) if notice.state == "waiting" else None,
-        "created": rfc3339(notice.created),
-        "answer": notice.answer,
-    }
 
 
 def _print(found: list[Notice]) -> None:
